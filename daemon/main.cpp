@@ -1,0 +1,5 @@
+#include "daemon/commands.hpp"
+
+int main(int argc, char** argv) {
+    return process::run(argc, argv);
+}
