@@ -20,7 +20,7 @@ struct Situation {
     Usage const* usage = nullptr;  // null: nothing measured
     Usage const* before = nullptr;
     Waiver const* waiver = nullptr;  // the one ruling now
-    bool limit_exists = true;
+    Limit const* limit = nullptr;    // null: no longer in force
     bool limits_changed = false;
     Held held = Held::no;
     model::Time at{};
@@ -90,9 +90,9 @@ bool sees(Sight sight, Situation const& now) {
         case Sight::level_raised:
             return clear && only_level_raised(now);
         case Sight::limit_removed:
-            return !now.limit_exists;
+            return now.limit == nullptr;
         case Sight::out_of_scope:
-            return now.limit_exists && usage == nullptr && now.held == Held::no;
+            return now.limit != nullptr && usage == nullptr && now.held == Held::no;
     }
     return false;
 }
@@ -176,15 +176,18 @@ std::vector<Outcome> advance(Scene const& scene) {
                       .usage = usage,
                       .before = nullptr,
                       .waiver = waiver == waivers.end() ? nullptr : waiver->second,
-                      .limit_exists = true,
+                      .limit = nullptr,
                       .limits_changed = scene.limits_changed,
                       .held = Held::no,
                       .at = scene.as_of.at};
         if (scene.checks_before != nullptr) now.before = scene.checks_before->find(now.alert.key);
         now.held = usage != nullptr ? usage->held : scene.checks.held(now.alert.key);
-        now.limit_exists = std::ranges::any_of(scene.limits, [&](Limit const& limit) {
-            return limit.limit_id == now.alert.key.limit_id;
-        });
+        auto const limit =
+            std::ranges::find(scene.limits, now.alert.key.limit_id, &Limit::limit_id);
+        if (limit != scene.limits.end()) {
+            now.limit = &*limit;
+            now.alert.owner = limit->owner;
+        }
         return now;
     };
 

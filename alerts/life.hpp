@@ -122,6 +122,7 @@ struct Alert {
     model::Held held = model::Held::no;
     std::int64_t row_version = 1;
     std::optional<double> acknowledged_observed;  // what was observed when it was taken up
+    std::string owner;                            // who looks after it, by its limit
     std::string end_reason;                       // of an ended one
     friend bool operator==(Alert const&, Alert const&) = default;
 };

@@ -178,8 +178,10 @@ int list_alerts(Common const& common, bool ended_too) {
         std::cerr
             << (last.rows.empty()
                     ? "nothing has been assessed yet: run `loadline assess` or `loadline serve`\n"
-                    : fmt::format("{} alerts as of {}; {} rows set aside\n", rows.rows.size(),
-                                  *last.at(0, "as_of"), *last.at(0, "rows_set_aside")));
+                    : fmt::format("{} alerts as of {}; {} rows set aside, worth {}\n",
+                                  rows.rows.size(), *last.at(0, "as_of"),
+                                  *last.at(0, "rows_set_aside"),
+                                  readable_figure(last.at(0, "amount_set_aside").value_or("0"))));
     }
     return done;
 }

@@ -423,7 +423,7 @@ std::vector<alerts::Alert> Turn::live_alerts() {
         std::vector<alerts::Alert> live;
         for (auto const& row : impl_->work.exec(R"sql(
                 SELECT a.alert_id, a.limit_id, a.subject_kind, a.subject, a.measure, a.severity, a.state, a.due_at,
-                       a.observed, a.level, a.worst_observed, a.held_reason, a.row_version,
+                       a.observed, a.level, a.worst_observed, a.held_reason, a.row_version, coalesce(a.owner, ''),
                        (SELECT e.observed FROM loadline.alert_event AS e
                         WHERE e.alert_id = a.alert_id AND e.kind = 'acknowledged' AND a.state = 'acknowledged'
                         ORDER BY e.event_id DESC LIMIT 1)
@@ -443,7 +443,8 @@ std::vector<alerts::Alert> Turn::live_alerts() {
                  .worst_observed = number_of(row[10]),
                  .held = held_of(row[11]),
                  .row_version = row[12].as<std::int64_t>(),
-                 .acknowledged_observed = maybe_number(row[13]),
+                 .acknowledged_observed = maybe_number(row[14]),
+                 .owner = text_of(row[13]),
                  .end_reason = {}});
         return live;
     });
@@ -589,9 +590,9 @@ void Turn::Impl::write_alert(ExplainedOutcome const& explained, std::string cons
                     R"sql(
             INSERT INTO loadline.alert
                 (limit_id, subject_kind, subject, measure, severity, state, nature, episode, observed, level, worst_observed,
-                 held_reason, opened_at, opened_by_assessment, changed_at, changed_by_assessment, cause)
+                 held_reason, opened_at, opened_by_assessment, changed_at, changed_by_assessment, cause, owner)
             SELECT $1, $2, $3, $4, $5, $6, $7, 1 + coalesce(max(a.episode), 0), $8::numeric, $9::numeric, $10::numeric,
-                   $11, transaction_timestamp(), $12::uuid, transaction_timestamp(), $12::uuid, $13::jsonb
+                   $11, transaction_timestamp(), $12::uuid, transaction_timestamp(), $12::uuid, $13::jsonb, nullif($14, '')
             FROM loadline.alert AS a
             WHERE (a.limit_id, a.subject_kind, a.subject) = ($1, $2, $3)
             RETURNING alert_id)sql",
@@ -599,7 +600,8 @@ void Turn::Impl::write_alert(ExplainedOutcome const& explained, std::string cons
                     std::string{word(alerts::subject_kind_words, alert.key.kind)},
                     alert.key.subject, std::string{word(alerts::measure_words, alert.measure)},
                     severity, state, pointer(nature), number(alert.observed), number(alert.level),
-                    number(alert.worst_observed), pointer(held), assessment_id, pointer(cause))[0]
+                    number(alert.worst_observed), pointer(held), assessment_id, pointer(cause),
+                    alert.owner)[0]
                 .as<std::int64_t>();
     } else {
         bool const moved = !moves.empty();
@@ -616,12 +618,13 @@ void Turn::Impl::write_alert(ExplainedOutcome const& explained, std::string cons
                 changed_at = CASE WHEN $12 THEN transaction_timestamp() ELSE changed_at END,
                 changed_by_assessment = CASE WHEN $12 THEN $13::uuid ELSE changed_by_assessment END,
                 ended_at = CASE WHEN $14 THEN transaction_timestamp() END,
-                end_reason = $15
+                end_reason = $15,
+                owner = nullif($16, '')
             WHERE alert_id = $1)sql",
             *alert_id, std::string{word(alerts::measure_words, alert.measure)}, severity, state,
             number(alert.observed), number(alert.level), number(alert.worst_observed),
             pointer(held), alert.row_version, pointer(cause), pointer(nature), moved, assessment_id,
-            ended, ended ? alert.end_reason.c_str() : nullptr);
+            ended, ended ? alert.end_reason.c_str() : nullptr, alert.owner);
         if (updated.affected_rows() != 1)
             throw std::runtime_error(fmt::format("alert {} is gone", *alert_id));
     }
@@ -763,7 +766,7 @@ Rows read_alerts(Connection& connection, bool ended_too) {
         fmt::format(R"sql(
         SELECT a.alert_id, a.state, a.severity, a.limit_id, a.subject_kind, a.subject, n.name, a.measure, a.observed, a.level,
                CASE WHEN a.level > 0 THEN a.observed / a.level END AS utilisation,
-               a.nature, a.held_reason, a.episode, {}, {}, {}, a.end_reason
+               a.nature, a.held_reason, a.owner, a.episode, {}, {}, {}, a.end_reason
         FROM loadline.alert AS a
         LEFT JOIN loadline.subject_name AS n USING (subject_kind, subject)
         WHERE $1 OR a.state NOT IN ('cured', 'withdrawn')
@@ -778,7 +781,7 @@ Rows read_alert(Connection& connection, std::int64_t alert_id) {
     return read(
         connection,
         fmt::format(R"sql(
-        SELECT a.alert_id, a.limit_id, a.subject_kind, a.subject, n.name, a.measure, a.severity, a.state, a.nature, a.episode,
+        SELECT a.alert_id, a.limit_id, a.subject_kind, a.subject, n.name, a.measure, a.severity, a.state, a.nature, a.owner, a.episode,
                a.observed, a.level, CASE WHEN a.level > 0 THEN a.observed / a.level END AS utilisation, a.worst_observed,
                a.held_reason, {}, a.opened_by_assessment, {}, a.changed_by_assessment, {}, {}, a.end_reason,
                a.row_version, a.cause,

@@ -12,7 +12,7 @@
 
 #include <algorithm>
 #include <array>
-#include <random>
+#include <iterator>
 #include <system_error>
 #include <thread>
 
@@ -100,6 +100,17 @@ void log_moves(std::span<ExplainedOutcome const> outcomes, model::Book const& bo
                          explanation ? explanation->cause : alerts::Cause{},
                          explanation ? explanation->nature : std::nullopt,
                          book.settings()->base_currency));
+}
+
+// Each once, when it begins.
+void log_unmeasured(alerts::Checks const& checks, alerts::Checks const& before) {
+    std::vector<alerts::Unmeasured> begun;
+    std::ranges::set_difference(checks.unmeasured, before.unmeasured, std::back_inserter(begun), {},
+                                &alerts::Unmeasured::key, &alerts::Unmeasured::key);
+    for (auto const& row : begun)
+        spdlog::info("event=unmeasured limit={} subject_kind={} subject={} reason=\"{}\"",
+                     row.key.limit_id, word(alerts::subject_kind_words, row.key.kind),
+                     row.key.subject, row.reason);
 }
 
 }  // namespace

@@ -375,10 +375,11 @@ TEST(Model, NeedsEveryKeyButThoseOfRevaluationAndScatter) {
 }
 
 TEST(Model, RefusesWhatIsOutOfItsDomain) {
-    std::string const whole50 = "', expected a whole number from 1 to 50";
+    auto const not_whole = [](std::string const& text) {
+        return "'" + text + "', expected a whole number from 1 to 50";
+    };
     for (std::string const text : {"0", "51", "-1", "1e0", "010", "0x10", "1_0", "one", "1.0"})
-        expect_model_faults("horizon_years", "horizon_years: ^" + text + "\n",
-                            {"'" + text + whole50});
+        expect_model_faults("horizon_years", "horizon_years: ^" + text + "\n", {not_whole(text)});
     expect_model_faults("horizon_years", "horizon_years: ^0.5\n",
                         {"a horizon of part years is not yet available, expected a whole number "
                          "from 1 to 50"});
@@ -386,12 +387,15 @@ TEST(Model, RefusesWhatIsOutOfItsDomain) {
                         {"'1' in quotes is text, expected a whole number from 1 to 50"});
 
     std::string const confidence = ", expected a number between 0.5 and 1 such as 0.999";
+    auto const is = [&](std::string const& text, std::string const& what) {
+        return "'" + text + "' is " + what + confidence;
+    };
     for (std::string const text : {"0.5", "1", "1.5", "-0.9"})
         expect_model_faults("confidence", "confidence: ^" + text + "\n",
-                            {"'" + text + "' is out of range" + confidence});
+                            {is(text, "out of range")});
     for (std::string const text : {"99.9%", "0,999", ".999", ".nan", ".inf", "1e999", "+0.9"})
         expect_model_faults("confidence", "confidence: ^" + text + "\n",
-                            {"'" + text + "' is no plain number" + confidence});
+                            {is(text, "no plain number")});
     expect_model_faults("confidence", "confidence: ^'0.999'\n",
                         {"'0.999' in quotes is text" + confidence});
     expect_model_faults("confidence", "confidence: ^~\n", {"no value" + confidence});
@@ -761,6 +765,9 @@ TEST(Levels, FitTheirMeasure) {
     std::string const money =
         ", expected an amount such as EUR 60 m (k, m, bn or none), or a share such as 25% of "
         "tier1, own_funds or portfolio (at most 100% of the portfolio)";
+    auto const no_level = [&](std::string const& text) {
+        return "'" + text + "' is no level of exposure" + money;
+    };
     for (std::string const text : {"60",
                                    "2.5%",
                                    "EUR",
@@ -783,9 +790,9 @@ TEST(Levels, FitTheirMeasure) {
                                    "EUR 1 m m",
                                    "25%of tier1"})
         expect_limit_faults("{id: a, per: name, measure: exposure, breach_at: ^" + text + "}",
-                            {"'" + text + "' is no level of exposure" + money});
+                            {no_level(text)});
     expect_limit_faults("{id: a, per: name, measure: exposure, breach_at: ^'EUR 1,000'}",
-                        {"'EUR 1,000' is no level of exposure" + money});
+                        {no_level("EUR 1,000")});
     expect_limit_faults("{id: a, per: name, measure: exposure, breach_at: ^CHF 1 m}",
                         {"'CHF 1 m' is not in the base currency, expected an amount in EUR"});
     for (std::string const text :
@@ -859,17 +866,19 @@ TEST(Levels, ByAFactAreCompleteOrHaveOthers) {
 }
 
 TEST(Levels, AreChosenOnlyByAFactTheSubjectHasOnce) {
-    std::string const once = ", expected a fact that each subject of the limit has once";
+    auto const expect = [](std::string const& per, std::string const& fact, bool fits) {
+        auto const limit = "{id: a, per: " + per +
+                           ", measure: exposure, breach_at: {by: " + (fits ? "" : "^") + fact +
+                           ", others: EUR 1}}";
+        auto const fault = "a " + per + " has no one " + fact +
+                           ", expected a fact that each subject of the limit has once";
+        expect_limit_faults(limit, std::vector<std::string>(fits ? 0 : 1, fault));
+    };
     for (std::string const fact : {"grade", "sector", "country", "segment"}) {
         for (std::string const per : {"name", "connected_group", "group_or_name", "sector",
                                       "country", "grade", "segment", "portfolio"}) {
             bool const group = per == "connected_group" || per == "group_or_name";
-            bool const fits = per == "name" || per == fact || (group && fact == "grade");
-            std::string const text = "{id: a, per: " + per + ", measure: exposure, breach_at: " +
-                                     "{by: " + (fits ? "" : "^") + fact + ", others: EUR 1}}";
-            expect_limit_faults(text, fits
-                                          ? std::vector<std::string>{}
-                                          : std::vector{"a " + per + " has no one " + fact + once});
+            expect(per, fact, per == "name" || per == fact || (group && fact == "grade"));
         }
     }
 }
@@ -946,7 +955,7 @@ TEST(Handling, HasItsForms) {
                             {"'" + text +
                              "', expected whole days, from 1 to 36500, such as 5 "
                              "days"});
-    expect_limit_faults(with_key("act: ^\"two\\nlines\""),
+    expect_limit_faults(with_key(R"(act: ^"two\nlines")"),
                         {"more than one line, expected what to do, in one paragraph"});
     expect_limit_faults(with_key("owner: ^[a]"), {"a list, expected who looks after the limit"});
     expect_faults("limits.yaml",

@@ -2,6 +2,7 @@
 
 #include "tests/config/marked.hpp"
 
+#include <fmt/format.h>
 #include <gmock/gmock.h>
 #include <gtest/gtest.h>
 #include <sys/stat.h>
@@ -99,7 +100,8 @@ TEST(Numbers, ArePercentagesWithoutASecondRounding) {
         auto const whole = std::to_string(i / 100);
         auto const part = std::to_string(100 + i % 100).substr(1);
         auto const four = std::to_string(10'000 + i).substr(1);
-        EXPECT_EQ(config::decimal(whole + "." + part, -2), std::stod("0." + four));
+        EXPECT_EQ(config::decimal(fmt::format("{}.{}", whole, part), -2),
+                  std::stod(fmt::format("0.{}", four)));
     }
     EXPECT_EQ(config::decimal("60", 6), 60e6);
     for (auto const* const text : {"", "-1", "1e3", "+1", ".5", "1.", "1,000", "01"})
@@ -272,11 +274,8 @@ TEST(Yaml, HasBounds) {
 TEST(Yaml, IsNotHeldUpByHostileFiles) {
     std::string bomb = "a0: &a0 [x, x, x, x, x, x, x, x, x, x]\n";
     for (int i = 1; i < 10; ++i) {
-        auto const last = std::to_string(i - 1);
-        auto const next = std::to_string(i);
-        bomb += "a" + next + ": &a" + next + " [";
-        for (int j = 0; j < 10; ++j) bomb += (j > 0 ? ", *a" : "*a") + last;
-        bomb += "]\n";
+        std::vector<std::string> const aliases(10, fmt::format("*a{}", i - 1));
+        bomb += fmt::format("a{0}: &a{0} [{1}]\n", i, fmt::join(aliases, ", "));
     }
     auto const start = std::chrono::steady_clock::now();
     for (auto const& text :
@@ -331,7 +330,7 @@ TEST_F(Files, AreReadByteForByte) {
 TEST_F(Files, AreRefusedUnlessTheyAreFilesWithContent) {
     std::filesystem::create_directory(folder / "folder");
     ASSERT_EQ(mkfifo((folder / "pipe").c_str(), 0600), 0);
-    std::ofstream{folder / "empty"};
+    std::ofstream{folder / "empty"} << "";
     std::ofstream{folder / "blank"} << " \n\n";
     EXPECT_THAT(texts(File{folder, "missing"}),
                 ElementsAre("missing: the file is missing, expected it in " + folder.string() +
