@@ -4,7 +4,6 @@
 
 #include <algorithm>
 #include <cmath>
-#include <limits>
 #include <numeric>
 #include <stdexcept>
 
@@ -20,8 +19,8 @@ void ensure(bool holds, char const* what) {
     if (!holds) throw std::logic_error(what);
 }
 
-bool add_up(double sum, double total, double scale) {
-    return std::abs(sum - total) <= 1e-9 * (std::abs(total) + scale);
+double sum(std::vector<double> const& amounts) {
+    return std::accumulate(amounts.begin(), amounts.end(), 0.0);
 }
 
 struct Quantile {
@@ -30,12 +29,12 @@ struct Quantile {
 };
 
 // The smallest x with at least `confidence` of the losses at or below it, and its error from the
-// order statistics around it: their ranks are binomial with deviation s. In a lumpy book one s to the
-// side may show no change where three do, so the widest of 1, 2 and 3 s counts. A rank beyond the
-// last stands for `all_lost`.
+// order statistics around it: their ranks are binomial with deviation s. In a lumpy book one s to
+// the side may show no change where three do, so the widest of 1, 2 and 3 s counts. A rank beyond
+// the last stands for `all_lost`.
 Quantile quantile(std::vector<double> losses, double confidence, double all_lost) {
     auto const count = static_cast<double>(losses.size());
-    double rank = std::ceil(confidence * count);  // from 1
+    double rank = std::ceil(confidence * count);          // from 1
     if ((rank - 1.0) / count >= confidence) rank -= 1.0;  // the product was rounded up
     double const deviation = std::sqrt(count * confidence * (1.0 - confidence));
 
@@ -53,6 +52,23 @@ Quantile quantile(std::vector<double> losses, double confidence, double all_lost
         result.error = std::max(result.error, (at(rank + side) - at(rank - side)) / (2.0 * steps));
     }
     return result;
+}
+
+// The scenarios of the tail and of the band.
+std::vector<std::uint64_t> choose(std::vector<double> const& losses, double quantile,
+                                  double half_width) {
+    std::vector<std::uint64_t> chosen;
+    std::size_t at_quantile = 0;
+    for (std::uint64_t s = 0; s < losses.size(); ++s) {
+        if (losses[s] < quantile - half_width) continue;
+        if (losses[s] == quantile && ++at_quantile > atom_scenarios_max) continue;
+        chosen.push_back(s);
+    }
+    return chosen;
+}
+
+bool in_band(TailSample const& sample, double loss) {
+    return std::abs(loss - sample.quantile) <= sample.half_width;
 }
 
 // The names' losses in the chosen scenarios, by name.
@@ -101,9 +117,8 @@ NameFigures closed_form(Name const& name, Settings const& settings, Migration co
     loss.head(grades) = exposure * settings.grade_values.row(name.grade.rank).transpose().array();
     loss[grades] = lost;
     figures.expected_loss = (probability * loss).sum();
-    figures.standalone_loss_deviation =
-        std::sqrt((probability * (loss - figures.expected_loss).square()).sum() +
-                  pd * recovery_variance);
+    figures.standalone_loss_deviation = std::sqrt(
+        (probability * (loss - figures.expected_loss).square()).sum() + pd * recovery_variance);
     return figures;
 }
 
@@ -133,36 +148,36 @@ double Figures::contribution_error(Contribution kind, std::span<std::uint32_t co
     // The band gives the members' part of a loss at the quantile: how it spreads around that part,
     // and how the part moves with the quantile.
     double count = 0.0;
-    double sum = 0.0;
+    double spreads = 0.0;
     double squares = 0.0;
     for (std::size_t s = 0; s < loss.size(); ++s) {
-        if (std::abs(sample.total[s] - sample.quantile) > sample.half_width) continue;
+        if (!in_band(sample, sample.total[s])) continue;
         double const spread = loss[s] - at_quantile - slope * (sample.total[s] - sample.quantile);
         count += 1.0;
-        sum += spread;
+        spreads += spread;
         squares += spread * spread;
     }
     double const band_variance =
-        (std::max(squares - sum * sum / count, 0.0) + std::pow(one_more(slope), 2)) /
+        (std::max(squares - spreads * spreads / count, 0.0) + std::pow(one_more(slope), 2)) /
         (count * count);
     double const moved = (slope - share) * sample.quantile_error;
     if (kind == Contribution::var) return std::sqrt(band_variance + moved * moved);
 
-    // The shortfall's contribution is a mean over all scenarios of what the tail adds to the part at
-    // the quantile, which itself counts for the probability the tail falls short of 1 - confidence.
-    count = sum = squares = 0.0;
+    // The shortfall's contribution is a mean over all scenarios of what the tail adds to the part
+    // at the quantile, which itself counts for the probability the tail falls short of 1 -
+    // confidence.
+    count = spreads = squares = 0.0;
     for (std::size_t s = 0; s < loss.size(); ++s) {
         if (sample.total[s] <= sample.quantile) continue;
         double const spread = loss[s] - at_quantile - share * (sample.total[s] - sample.quantile);
         count += 1.0;
-        sum += spread;
+        spreads += spread;
         squares += spread * spread;
     }
     auto const scenarios = static_cast<double>(sample.scenarios);
     double const tail = 1.0 - sample.confidence;
-    double const mean = sum / scenarios;
-    double const variance =
-        (squares + std::pow(one_more(share), 2)) / scenarios - mean * mean;
+    double const mean = spreads / scenarios;
+    double const variance = (squares + std::pow(one_more(share), 2)) / scenarios - mean * mean;
     double const short_of_tail = 1.0 - count / (scenarios * tail);
     return std::sqrt(variance / (scenarios * tail * tail) +
                      short_of_tail * short_of_tail * band_variance);
@@ -175,10 +190,11 @@ Figures assess(Book const& book, unsigned threads) {
 Figures assess(std::span<std::shared_ptr<Name const> const> names, Settings const& settings,
                unsigned threads) {
     Migration const migration{settings};
-    Figures figures;
-    figures.plan.simulation = settings.simulation;
-    auto& [totals, measures, plan, sample] = figures;
+    Simulation const simulation{names, settings, migration};
+    auto const losses = simulation.losses(0, settings.simulation.scenarios, threads);
 
+    Figures figures;
+    auto& [totals, measures, plan, sample] = figures;
     std::vector<double> expected(names.size(), 0.0);  // of the loss the simulation draws
     for (std::size_t i = 0; i < names.size(); ++i) {
         measures.push_back(closed_form(*names[i], settings, migration));
@@ -190,96 +206,87 @@ Figures assess(std::span<std::shared_ptr<Name const> const> names, Settings cons
         }
     }
 
-    Simulation const simulation{names, settings, migration};
     sample.base = simulation.base();
     sample.largest = simulation.largest();
     sample.scenarios = settings.simulation.scenarios;
     sample.confidence = settings.confidence;
-    auto const total = [](std::vector<double> const& amounts) {
-        return std::accumulate(amounts.begin(), amounts.end(), 0.0);
-    };
-    double const base = total(sample.base);
-
-    auto const losses = simulation.losses(0, sample.scenarios, threads);
-    auto const [q, q_error] =
-        quantile(losses, settings.confidence, base + total(sample.largest));
-    sample.quantile = q;
-    sample.quantile_error = q_error;
-    totals.loss_quantile = q;
-    totals.loss_quantile_error = q_error;
-    totals.credit_var = q - totals.expected_loss;
-    totals.credit_var_error = q_error;
+    double const base = sum(sample.base);
+    Quantile const found = quantile(losses, settings.confidence, base + sum(sample.largest));
+    sample.quantile = found.value;
+    sample.quantile_error = found.error;
+    totals.loss_quantile = found.value;
+    totals.loss_quantile_error = found.error;
+    totals.credit_var = found.value - totals.expected_loss;
+    totals.credit_var_error = found.error;
 
     // Contributions to the quantile are means over the atom at it, or over a band of losses around
-    // it. The band is 1% of the quantile to either side; where staying has a value too, of the
+    // it: 1% of the quantile to either side. Where staying has a value too, what counts is the
     // quantile's distance from the loss if nobody moves, or from the expected loss where that is
     // further. What the band's mean loss is off by goes to the names in proportion to their own
     // distance, so that the sum is exact.
-    auto const atom = static_cast<std::size_t>(std::ranges::count(losses, q));
-    bool const from_base = std::abs(q - base) >= std::abs(totals.credit_var);
-    double const distance = from_base ? q - base : totals.credit_var;
+    bool const from_base = std::abs(found.value - base) >= std::abs(totals.credit_var);
+    double const distance = from_base ? found.value - base : totals.credit_var;
     std::vector<double> const& origin = from_base ? sample.base : expected;
+    auto const atom = static_cast<std::size_t>(std::ranges::count(losses, found.value));
     if (atom < atom_scenarios_min) sample.half_width = plan.band * std::abs(distance);
 
-    std::vector<std::uint64_t> chosen;
-    std::size_t band_size = 0;
-    double band_loss = 0.0;
-    double excess = 0.0;  // sum of L - q over the tail
-    for (std::uint64_t s = 0; s < losses.size(); ++s) {
-        bool const in_band = std::abs(losses[s] - q) <= sample.half_width;
-        if (losses[s] <= q && (!in_band || (losses[s] == q && band_size >= atom_scenarios_max)))
-            continue;
-        chosen.push_back(s);
-        sample.total.push_back(losses[s]);
-        if (losses[s] > q) excess += losses[s] - q;
-        if (!in_band) continue;
-        ++band_size;
-        band_loss += losses[s];
-    }
+    auto const chosen = choose(losses, sample.quantile, sample.half_width);
+    for (std::uint64_t const s : chosen) sample.total.push_back(losses[s]);
     gather(sample, simulation.moves(chosen, threads), names.size());
 
-    auto const band_count = static_cast<double>(band_size);
-    double const band_distance = band_loss / band_count - (q - distance);
-    plan.band_scenarios = band_size;
-    plan.band_scale = distance == 0.0 ? 1.0 : distance / band_distance;
-
+    double band_count = 0.0;
+    double band_loss = 0.0;
+    double tail_count = 0.0;
+    double excess = 0.0;  // of the tail's losses over the quantile
+    for (double const loss : sample.total) {
+        if (in_band(sample, loss)) {
+            band_count += 1.0;
+            band_loss += loss;
+        }
+        if (loss > found.value) {
+            tail_count += 1.0;
+            excess += loss - found.value;
+        }
+    }
     double const tail = static_cast<double>(sample.scenarios) * (1.0 - settings.confidence);
-    double const tail_count =
-        static_cast<double>(std::ranges::count_if(sample.total, [q](double loss) { return loss > q; }));
-    totals.expected_shortfall = q + excess / tail;
+    totals.expected_shortfall = found.value + excess / tail;
+    plan.simulation = settings.simulation;
+    plan.band_scenarios = static_cast<std::uint64_t>(band_count);
+    if (distance != 0.0)
+        plan.band_scale = distance / (band_loss / band_count - (found.value - distance));
 
     sample.at_quantile.resize(names.size());
     sample.slope.resize(names.size());
     double var_sum = 0.0;
     double es_sum = 0.0;
-    double scale = 0.0;  // of the amounts that are added up
     for (std::size_t i = 0; i < names.size(); ++i) {
-        double in_band = 0.0;
-        double in_tail = 0.0;
+        double band_moves = 0.0;
+        double tail_moves = 0.0;
         for (std::size_t k = sample.first[i]; k < sample.first[i + 1]; ++k) {
-            auto const [s, amount] = sample.losses[k];
-            if (std::abs(sample.total[s] - q) <= sample.half_width) in_band += amount;
-            if (sample.total[s] > q) in_tail += amount;
+            auto const& [s, amount] = sample.losses[k];
+            if (in_band(sample, sample.total[s])) band_moves += amount;
+            if (sample.total[s] > found.value) tail_moves += amount;
         }
-        double const own_distance = sample.base[i] + in_band / band_count - origin[i];
-        double const at_quantile = origin[i] + plan.band_scale * own_distance;
+        double const own_distance =
+            plan.band_scale * (sample.base[i] + band_moves / band_count - origin[i]);
+        double const at_quantile = origin[i] + own_distance;
         sample.at_quantile[i] = at_quantile;
-        sample.slope[i] = distance == 0.0 ? 0.0 : plan.band_scale * own_distance / distance;
+        if (distance != 0.0) sample.slope[i] = own_distance / distance;
         measures[i].var_contribution = at_quantile - expected[i];
         measures[i].es_contribution =
-            at_quantile + (in_tail + tail_count * (sample.base[i] - at_quantile)) / tail;
+            at_quantile + (tail_moves + tail_count * (sample.base[i] - at_quantile)) / tail;
         var_sum += measures[i].var_contribution;
         es_sum += measures[i].es_contribution;
-        scale += std::abs(sample.base[i]) + sample.largest[i];
     }
-    ensure(add_up(var_sum, totals.credit_var, scale), "contributions do not sum to credit VaR");
-    ensure(add_up(es_sum, totals.expected_shortfall, scale),
+    double const rounding = 1e-9 * (std::abs(base) + sum(sample.largest));
+    ensure(std::abs(var_sum - totals.credit_var) <= rounding,
+           "contributions do not sum to credit VaR");
+    ensure(std::abs(es_sum - totals.expected_shortfall) <= rounding,
            "contributions do not sum to expected shortfall");
 
     std::vector<std::uint32_t> everyone(names.size());
     std::iota(everyone.begin(), everyone.end(), 0U);
-    totals.expected_shortfall_error =
-        figures.contribution_error(Contribution::es, everyone, 0.0);
+    totals.expected_shortfall_error = figures.contribution_error(Contribution::es, everyone, 0.0);
     for (std::uint32_t const i : everyone) {
         std::span const one{&i, 1};
         measures[i].var_contribution_error =

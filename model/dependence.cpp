@@ -41,7 +41,9 @@ bool has_index(Settings const& settings, std::string_view sector, std::string_vi
                          (country_weight <= 0.0 || find(names, "country", country)));
 }
 
-double normal_below(double x) { return 0.5 * std::erfc(-x / std::numbers::sqrt2); }
+double normal_below(double x) {
+    return 0.5 * std::erfc(-x / std::numbers::sqrt2);
+}
 
 double probability_below(double cut, double asset_correlation, double index) {
     return normal_below((cut - std::sqrt(asset_correlation) * index) /
@@ -59,9 +61,9 @@ Blend blend(Settings const& settings, std::string_view sector, std::string_view 
     if (sector_weight <= 0.0) result.first = result.second;
     if (country_weight <= 0.0) result.second = result.first;
 
-    double const variance = sector_weight * sector_weight + country_weight * country_weight +
-                            2.0 * sector_weight * country_weight *
-                                correlation(result.first, result.second);
+    double const variance =
+        sector_weight * sector_weight + country_weight * country_weight +
+        2.0 * sector_weight * country_weight * correlation(result.first, result.second);
     if (!(variance > 1e-12))
         throw std::domain_error("the indices " + names[result.first] + " and " +
                                 names[result.second] + " cancel out");
@@ -75,8 +77,7 @@ Eigen::MatrixXd factor(Eigen::MatrixXd const& correlation) {
     auto const& variances = solver.eigenvalues();  // ascending
     auto const rounding = 1e-14 * static_cast<double>(variances.size());
     auto const kept = (variances.array() > rounding).count();
-    return solver.eigenvectors().rightCols(kept) *
-           variances.tail(kept).cwiseSqrt().asDiagonal();
+    return solver.eigenvectors().rightCols(kept) * variances.tail(kept).cwiseSqrt().asDiagonal();
 }
 
 }  // namespace model

@@ -4,7 +4,6 @@
 
 #include <Eigen/Core>
 
-#include <compare>
 #include <cstdint>
 #include <string_view>
 
@@ -42,7 +41,6 @@ struct Blend {
     std::uint32_t second = 0;  // equal to `first` where one kind alone is used
     double first_weight = 1.0;
     double second_weight = 0.0;
-    friend auto operator<=>(Blend const&, Blend const&) = default;
 };
 
 // The blend of a sector's and a country's index; of `others` for codes without one. Throws

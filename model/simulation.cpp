@@ -14,6 +14,7 @@
 #include <cmath>
 #include <limits>
 #include <map>
+#include <utility>
 
 namespace model {
 namespace {
@@ -47,7 +48,7 @@ std::size_t first_beyond(std::vector<double> const& ascending, double x) {
     std::size_t left = ascending.size();
     while (left > 1) {
         std::size_t const half = left / 2;
-        begin += half * static_cast<std::size_t>(begin[half - 1] <= x);
+        begin += half & -static_cast<std::size_t>(begin[half - 1] <= x);
         left -= half;
     }
     return static_cast<std::size_t>(begin - ascending.data());
@@ -100,7 +101,9 @@ public:
 
 private:
     static std::uint32_t low(std::uint64_t word) { return static_cast<std::uint32_t>(word); }
-    static std::uint32_t high(std::uint64_t word) { return static_cast<std::uint32_t>(word >> 32U); }
+    static std::uint32_t high(std::uint64_t word) {
+        return static_cast<std::uint32_t>(word >> 32U);
+    }
 
     // G(a) = G(a + 1) U^(1/a): Devroye (1986), Non-uniform random variate generation, IX.3.
     double log_gamma_variable(double a) {
@@ -114,69 +117,61 @@ private:
     std::size_t unused_ = 0;  // of words_
 };
 
-Simulation::Simulation(std::span<std::shared_ptr<Name const> const> names,
-                       Settings const& settings, Migration const& migration)
+Simulation::Simulation(std::span<std::shared_ptr<Name const> const> names, Settings const& settings,
+                       Migration const& migration)
     : settings_{settings},
       migration_{migration},
       factor_{factor(settings.indices.correlation)},
       stakes_(names.size()),
       base_(names.size()),
       largest_(names.size()) {
-    bool const revalued = settings.loss == LossKind::revaluation;
-    std::size_t const grades = settings.grades.size();
     if (double const d = settings.loss_given_default_deviation; d > 0.0) {
         double const m = settings.loss_given_default.value();
         precision_ = m * (1.0 - m) / (d * d) - 1.0;
     }
+    if (settings.loss == LossKind::default_only && precision_ == 0.0) one_amount_ = true;
 
-    std::map<Kind, std::uint32_t> kinds;
-    std::map<Blend, std::map<std::uint32_t, std::vector<std::uint32_t>>> by_blend_and_kind;
-    double total = 0.0;
+    using Indices = std::pair<std::uint32_t, std::uint32_t>;
+    using GradeAndCorrelation = std::pair<std::uint8_t, double>;
+    std::map<std::pair<Indices, GradeAndCorrelation>, std::vector<std::uint32_t>> members;
     for (std::uint32_t i = 0; i < names.size(); ++i) {
         Name const& name = *names[i];
-        Grade const grade = name.grade;
-        if (grade.rank >= grades) continue;
-
-        auto& [exposure, loss, steps_if_lost] = stakes_[i];
-        exposure = name.exposure_at_default.units();
-        loss = name.loss_at_default;
-        if (revalued) base_[i] = exposure * settings.grade_values(grade.rank, grade.rank);
-        for (std::size_t state = revalued ? 0 : grades; state <= grades; ++state) {
-            auto const column = static_cast<Eigen::Index>(state);
-            if (state == grade.rank || migration.matrix()(grade.rank, column) <= 0.0) continue;
-            double const most = state < grades ? exposure * settings.grade_values(grade.rank, column)
-                                : precision_ > 0.0 && loss > 0.0 ? exposure
-                                                                 : loss;
-            largest_[i] = std::max(largest_[i], std::abs(most - base_[i]));
-        }
-        total += std::abs(base_[i]) + largest_[i];
+        if (name.grade == settings.grades.in_default()) continue;
+        stakes_[i] = {.exposure_at_default = name.exposure_at_default.units(),
+                      .loss_at_default = name.loss_at_default};
+        if (settings.loss == LossKind::revaluation)
+            base_[i] = stakes_[i].exposure_at_default *
+                       settings.grade_values(name.grade.rank, name.grade.rank);
+        largest_[i] = largest_move(i, name.grade);
         if (largest_[i] == 0.0) continue;
 
-        auto const& cuts = migration.thresholds(grade);  // worst state first
-        Kind const kind{.grade = grade.rank,
-                        .asset_correlation =
-                            name.asset_correlation.value_or(settings.asset_correlation[grade.rank]),
-                        .cut_down = cuts[revalued ? grades - 1 - grade.rank : 0],
-                        .cut_up = revalued && grade.rank > 0 ? cuts[grades - grade.rank] : infinity};
-        auto const [place, is_new] =
-            kinds.try_emplace(kind, static_cast<std::uint32_t>(kinds_.size()));
-        if (is_new) kinds_.push_back(kind);
-        by_blend_and_kind[blend(settings, name.sector, name.country)][place->second].push_back(i);
+        Blend const indices = blend(settings, name.sector, name.country);
+        double const asset_correlation =
+            name.asset_correlation.value_or(settings.asset_correlation[name.grade.rank]);
+        members[{{indices.first, indices.second}, {name.grade.rank, asset_correlation}}].push_back(
+            i);
     }
 
-    for (auto const& [blend, by_kind] : by_blend_and_kind) {
-        for (auto const& [kind, members] : by_kind) {
-            cells_.push_back({.blend = static_cast<std::uint32_t>(blends_.size()),
-                              .kind = kind,
-                              .first_member = static_cast<std::uint32_t>(members_.size()),
-                              .members = static_cast<std::uint32_t>(members.size())});
-            members_.insert(members_.end(), members.begin(), members.end());
-        }
-        blends_.push_back(blend);
+    std::map<Indices, std::uint32_t> blends;
+    std::map<GradeAndCorrelation, std::uint32_t> kinds;
+    for (auto const& [key, those] : members) {
+        auto const& [indices, grade_and_correlation] = key;
+        Name const& name = *names[those.front()];
+        auto const blend_number = static_cast<std::uint32_t>(blends_.size());
+        auto const [blend_at, new_blend] = blends.try_emplace(indices, blend_number);
+        if (new_blend) blends_.push_back(blend(settings, name.sector, name.country));
+        auto const kind_number = static_cast<std::uint32_t>(kinds_.size());
+        auto const [kind_at, new_kind] = kinds.try_emplace(grade_and_correlation, kind_number);
+        if (new_kind) kinds_.push_back(kind(name.grade, grade_and_correlation.second));
+        cells_.push_back({.blend = blend_at->second,
+                          .kind = kind_at->second,
+                          .first_member = static_cast<std::uint32_t>(members_.size()),
+                          .members = static_cast<std::uint32_t>(those.size())});
+        members_.insert(members_.end(), those.begin(), those.end());
     }
 
-    // Downward moves are likeliest at the bin's lower edge, upward ones at its upper edge. A hair is
-    // added so that rounding cannot put a bound on the wrong side of the hazard.
+    // Downward moves are likeliest at the bin's lower edge, upward ones at its upper edge. A hair
+    // is added so that rounding cannot put a bound on the wrong side of the hazard.
     for (std::size_t bin = 0; bin < bins; ++bin)
         for (Kind const& kind : kinds_) {
             double const low = lower_edge(bin);
@@ -186,16 +181,55 @@ Simulation::Simulation(std::span<std::shared_ptr<Name const> const> names,
         }
 
     // At most 1e15 steps in all, which a double counts exactly.
-    if (total > 0.0) steps_per_unit_ = std::pow(10.0, std::min(15.0 - std::ceil(std::log10(total)), 15.0));
+    double total = 0.0;
+    for (std::size_t i = 0; i < names.size(); ++i) total += std::abs(base_[i]) + largest_[i];
+    if (total > 0.0)
+        steps_per_unit_ = std::pow(10.0, std::min(15.0 - std::ceil(std::log10(total)), 15.0));
     for (std::size_t i = 0; i < names.size(); ++i) {
-        stakes_[i].steps_if_lost = steps(stakes_[i].loss_at_default) - steps(base_[i]);
+        stakes_[i].steps_on_default = steps(stakes_[i].loss_at_default) - steps(base_[i]);
         base_steps_ += steps(base_[i]);
         base_[i] = steps(base_[i]) / steps_per_unit_;
     }
-    certain_ = !revalued && precision_ == 0.0;
 }
 
-double Simulation::steps(double loss) const { return std::nearbyint(loss * steps_per_unit_); }
+double Simulation::largest_move(std::uint32_t name, Grade from) const {
+    auto const reachable = [&](std::size_t state) {
+        return migration_.matrix()(from.rank, static_cast<Eigen::Index>(state)) > 0.0;
+    };
+    auto const& [exposure, loss, steps_on_default] = stakes_[name];
+    std::size_t const grades = settings_.grades.size();
+    double largest = 0.0;
+    if (reachable(grades)) {
+        double const most = precision_ > 0.0 && loss > 0.0 ? exposure : loss;
+        largest = std::abs(most - base_[name]);
+    }
+    if (settings_.loss == LossKind::revaluation)
+        for (std::size_t state = 0; state < grades; ++state) {
+            if (state == from.rank || !reachable(state)) continue;
+            double const value =
+                settings_.grade_values(from.rank, static_cast<Eigen::Index>(state));
+            largest = std::max(largest, std::abs(exposure * value - base_[name]));
+        }
+    return largest;
+}
+
+Simulation::Kind Simulation::kind(Grade grade, double asset_correlation) const {
+    std::size_t const grades = settings_.grades.size();
+    auto const& cuts = migration_.thresholds(grade);  // worst state first
+    Kind kind{.grade = grade.rank,
+              .asset_correlation = asset_correlation,
+              .cut_down = cuts.front(),
+              .cut_up = infinity};
+    if (settings_.loss == LossKind::revaluation) {
+        kind.cut_down = cuts[grades - 1 - grade.rank];
+        if (grade.rank > 0) kind.cut_up = cuts[grades - grade.rank];
+    }
+    return kind;
+}
+
+double Simulation::steps(double loss) const {
+    return std::nearbyint(loss * steps_per_unit_);
+}
 
 double Simulation::hazard(Kind const& kind, double index_down, double index_up) {
     double const rho = kind.asset_correlation;
@@ -203,9 +237,8 @@ double Simulation::hazard(Kind const& kind, double index_down, double index_up) 
     double const up = probability_below(-kind.cut_up, rho, -index_up);
     if (down + up <= 0.5) return -std::log1p(-(down + up));
 
-    double const stay = down > 0.5
-                            ? probability_below(-kind.cut_down, rho, -index_down) - up
-                            : probability_below(kind.cut_up, rho, index_up) - down;
+    double const stay = down > 0.5 ? probability_below(-kind.cut_down, rho, -index_down) - up
+                                   : probability_below(kind.cut_up, rho, index_up) - down;
     return stay > 0.0 ? std::min(-std::log(stay), hazard_max) : hazard_max;
 }
 
@@ -218,29 +251,27 @@ std::size_t Simulation::state_after(Kind const& kind, double index, Stream& stre
     double const down = probability_below(kind.cut_down, rho, index);
     double const up = probability_below(-kind.cut_up, rho, -index);
     double const place = stream.uniform() * (down + up);
-    if (place < down) {  // from default upwards
-        std::size_t state = grades;
-        while (state > kind.grade + 1U &&
-               place >= probability_below(cuts[grades - state], rho, index))
-            --state;
-        return state;
+    std::size_t state = kind.grade;
+    if (place < down || up == 0.0) {
+        do ++state;
+        while (state < grades && place < probability_below(cuts[grades - 1 - state], rho, index));
+    } else {
+        do --state;
+        while (state > 0 && place - down < probability_below(-cuts[grades - state], rho, -index));
     }
-    std::size_t state = 0;  // from the best grade downwards
-    while (state + 1U < kind.grade &&
-           place - down >= probability_below(-cuts[grades - 1 - state], rho, -index))
-        ++state;
     return state;
 }
 
-double Simulation::drawn(std::uint32_t name, Kind const& kind, double index,
-                         Stream& stream) const {
-    auto const [exposure, loss, steps_if_lost] = stakes_[name];
+double Simulation::steps_of_move(std::uint32_t name, Kind const& kind, double index,
+                                 Stream& stream) const {
+    auto const& [exposure, loss, steps_on_default] = stakes_[name];
+    if (one_amount_) return steps_on_default;
     std::size_t const state = state_after(kind, index, stream);
     if (state < settings_.grades.size()) {
         double const value = settings_.grade_values(kind.grade, static_cast<Eigen::Index>(state));
         return steps(exposure * value) - steps(base_[name]);
     }
-    if (precision_ == 0.0 || loss <= 0.0 || loss >= exposure) return steps_if_lost;
+    if (precision_ == 0.0 || loss <= 0.0 || loss >= exposure) return steps_on_default;
     double const mean = loss / exposure;
     double const lost = stream.beta(mean * precision_, (1.0 - mean) * precision_);
     return steps(exposure * lost) - steps(base_[name]);
@@ -255,7 +286,7 @@ Simulation::Scratch Simulation::scratch() const {
             .points = {}};
 }
 
-// Tells `visit` each name that moves, and its loss beyond that of staying.
+// Tells `visit` each name that moves, and the steps its loss moves by.
 template <class Visit>
 void Simulation::run(std::uint64_t scenario, Scratch& scratch, Visit const& visit) const {
     auto& [factors, indices, index, row, ends, points] = scratch;
@@ -276,26 +307,30 @@ void Simulation::run(std::uint64_t scenario, Scratch& scratch, Visit const& visi
         ends[c] = end;
     }
 
+    // In three goes, so that searches overlap in the processor: where the points fall, in which
+    // cells, on whom.
     points.clear();
-    for (double point = stream.exponential(); point < end; point += stream.exponential())
-        points.push_back(point);
+    double next = stream.exponential();
+    while (next < end) {
+        points.push_back({.place = next});
+        next += stream.exponential();
+    }
+    for (Point& point : points) point.cell = first_beyond(ends, point.place);
 
     std::uint32_t moved = none;
-    for (double const point : points) {
-        std::size_t const c = first_beyond(ends, point);
+    for (auto const& [place, c] : points) {
         auto const& [blend, kind, first_member, members] = cells_[c];
-        std::size_t const bounds = row[blend] + kind;
-        double const length = hazard_above_[bounds];
-        double const beyond = point - (ends[c] - members * length);
-        auto const member = std::min(static_cast<std::uint32_t>(std::max(beyond, 0.0) / length), members - 1);
-        double const place = beyond - member * length;
+        double const length = hazard_above_[row[blend] + kind];
+        double const in_cell = std::max(place - (ends[c] - members * length), 0.0);
+        auto const member = std::min(static_cast<std::uint32_t>(in_cell / length), members - 1);
+        double const in_name = in_cell - member * length;
         std::uint32_t const name = members_[first_member + member];
         if (name == moved) continue;
-        if (place >= hazard_below_[bounds] &&
-            place >= hazard(kinds_[kind], index[blend], index[blend]))
+        if (in_name >= hazard_below_[row[blend] + kind] &&
+            in_name >= hazard(kinds_[kind], index[blend], index[blend]))
             continue;
         moved = name;
-        visit(name, certain_ ? stakes_[name].steps_if_lost : drawn(name, kinds_[kind], index[blend], stream));
+        visit(name, steps_of_move(name, kinds_[kind], index[blend], stream));
     }
 }
 

@@ -30,18 +30,18 @@ tests/.*              .*
 ROWS
 
 may_include() { # FILE HEADER
-    local row file_pattern header_pattern
+    local row
     for row in "${allowed[@]}"; do
-        read -r file_pattern header_pattern <<<"$row"
-        [[ $1 =~ ^($file_pattern)$ && $2 =~ ^($header_pattern)$ ]] && return
+        [[ $1 =~ ^(${row%% *})$ && $2 =~ ^(${row##* })$ ]] && return
     done
     return 1
 }
 
 mapfile -t files < <(find model alerts config daemon tests -name '*.[ch]pp' | sort)
 
+header_pattern='[<"][^>"]*[>"]'
 while IFS=: read -r file line text; do
-    header=$(sed -E 's/^[^<"]*([<"][^>"]*[>"]).*/\1/' <<<"$text")
+    [[ $text =~ $header_pattern ]] && header=${BASH_REMATCH[0]}
     may_include "$file" "$header" || fault "$file:$line: this file may not include $header"
 done < <(grep -HnE '^[[:space:]]*#[[:space:]]*include' "${files[@]}")
 

@@ -16,7 +16,7 @@ using model::Contribution;
 using model::Figures;
 using model::LossKind;
 
-double sum(Figures const& figures, double model::NameFigures::* figure) {
+double sum(Figures const& figures, double model::NameFigures::*figure) {
     double result = 0.0;
     for (auto const& name : figures.names) result += name.*figure;
     return result;
@@ -56,7 +56,8 @@ TEST(Contributions, SumToCreditVarAndToShortfall) {
 TEST(Contributions, SumWhereTheBookGainsOnAverage) {
     auto settings = small_lender();
     settings.loss = LossKind::revaluation;
-    settings.grade_values = Eigen::MatrixXd::Constant(7, 7, -0.2);  // a fifth is earned by not failing
+    settings.grade_values =
+        Eigen::MatrixXd::Constant(7, 7, -0.2);  // a fifth is earned by not failing
     auto const figures = assess(support::lender(300), settings, 0);
     EXPECT_LT(figures.totals.loss_quantile, 0.0);
     EXPECT_GT(figures.totals.credit_var, 0.0);
@@ -147,9 +148,11 @@ TEST(Deviation, OfBetaRecoveriesAddsTheirVarianceOnDefault) {
     settings.loss_given_default_deviation = 0.25;
     // By hand: a mean of 0.2 has the variance 0.2 x 0.8 x 0.25^2 / (0.5 x 0.5) = 0.04; so
     // E[L^2] = 0.04 x 100^2 x (0.2^2 + 0.04) = 32 and E[L] = 0.8.
-    auto const figures = closed_form(*support::name(0, 100.0, 20.0), settings, model::Migration{settings});
+    auto const figures =
+        closed_form(*support::name(0, 100.0, 20.0), settings, model::Migration{settings});
     EXPECT_NEAR(figures.standalone_loss_deviation, std::sqrt(32.0 - 0.64), 1e-12);
-    auto const whole = closed_form(*support::name(0, 100.0, 100.0), settings, model::Migration{settings});
+    auto const whole =
+        closed_form(*support::name(0, 100.0, 100.0), settings, model::Migration{settings});
     EXPECT_NEAR(whole.standalone_loss_deviation, 100.0 * std::sqrt(0.04 * 0.96), 1e-12);
 }
 
@@ -197,7 +200,7 @@ TEST(StatedErrors, AreWhatTheSeedsScatterBy) {
     for (std::uint32_t i = 0; i < names.size(); ++i)
         if (names[i]->sector == "CONSTR") sector.push_back(i);
     ASSERT_GT(sector.size(), 10U);
-    auto const part = [&](Figures const& figures, double model::NameFigures::* figure) {
+    auto const part = [&](Figures const& figures, double model::NameFigures::*figure) {
         double of_sector = 0.0;
         for (auto const i : sector) of_sector += figures.names[i].*figure;
         return of_sector - 0.12 * sum(figures, figure);
@@ -233,10 +236,12 @@ TEST(StatedErrors, AreWhatTheSeedsScatterBy) {
         share_of_var += off(part(seen, var), part(truth, var),
                             seen.contribution_error(Contribution::var, sector, 0.12));
     }
-    for (auto const& [what, square] :
-         {std::pair{"quantile", quantile}, {"shortfall", shortfall}, {"name, es", largest_name},
-          {"name, var", largest_name_var}, {"share of es", share_of_es},
-          {"share of var", share_of_var}}) {
+    for (auto const& [what, square] : {std::pair{"quantile", quantile},
+                                       {"shortfall", shortfall},
+                                       {"name, es", largest_name},
+                                       {"name, var", largest_name_var},
+                                       {"share of es", share_of_es},
+                                       {"share of var", share_of_var}}) {
         EXPECT_GT(std::sqrt(square), 0.6) << what;
         EXPECT_LT(std::sqrt(square), 1.4) << what;
     }
@@ -274,8 +279,8 @@ TEST(StatedErrors, OfAShareKnowThatPartAndWholeMoveTogether) {
                 figures.totals.loss_quantile_error, 1e-9 * figures.totals.loss_quantile_error);
 }
 
-// A thousand scenarios hold one at or above the 99.9% quantile: two ranks up there is nothing left to
-// look at, and the error says so by what the book could lose.
+// A thousand scenarios hold one at or above the 99.9% quantile: two ranks up there is nothing left
+// to look at, and the error says so by what the book could lose.
 TEST(StatedErrors, AreWideWhereTheSampleEnds) {
     auto settings = small_lender();
     settings.simulation.scenarios = 1'000;

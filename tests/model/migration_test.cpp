@@ -76,8 +76,8 @@ TEST(Migration, HorizonOfTwoYearsIsTheMatrixTwiceWithDefaultAbsorbing) {
     settings.horizon_years = 2;
     Migration const migration{settings};
     // By hand: default in the first year, or a move and then default.
-    EXPECT_NEAR(migration.default_probability(Grade{0}).value(),
-                0.01 + 0.9 * 0.01 + 0.09 * 0.05, 1e-15);
+    EXPECT_NEAR(migration.default_probability(Grade{0}).value(), 0.01 + 0.9 * 0.01 + 0.09 * 0.05,
+                1e-15);
     EXPECT_NEAR(migration.matrix()(1, 0), 0.1 * 0.9 + 0.85 * 0.1, 1e-15);
     EXPECT_NEAR(migration.matrix().row(1).sum(), 1.0, 1e-15);
 }

@@ -53,7 +53,8 @@ std::vector<double> naive_losses(support::Names const& names, model::Settings co
                 name->asset_correlation.value_or(settings.asset_correlation[name->grade.rank]);
             double const x = std::sqrt(rho) * index + std::sqrt(1.0 - rho) * normal(bits);
             auto const& cuts = migration.thresholds(name->grade);
-            auto const state = grades - (std::upper_bound(cuts.begin(), cuts.end(), x) - cuts.begin());
+            auto const state =
+                grades - (std::upper_bound(cuts.begin(), cuts.end(), x) - cuts.begin());
             if (state == grades)
                 loss += name->loss_at_default;
             else if (settings.loss == LossKind::revaluation)
@@ -193,8 +194,8 @@ TEST(Simulation, TakesNamesToEveryGradeAsOftenAsTheMatrixSays) {
     }
 }
 
-// The probability proper is worked out only where the index leaves it open; names that are likely to
-// go in bad years and hit many times over are where a slip would show.
+// The probability proper is worked out only where the index leaves it open; names that are likely
+// to go in bad years and hit many times over are where a slip would show.
 TEST(Simulation, DefaultsTogetherAsOftenAsTheCorrelationSays) {
     for (double const p : {0.001, 0.3, 0.9, 1.0}) {
         for (double const rho : {0.0, 0.3, 0.99}) {
@@ -225,8 +226,8 @@ TEST(Simulation, NeverTouchesAGradeThatCannotDefaultNorANameInDefault) {
     EXPECT_EQ(simulation.largest(), (std::vector<double>{0.0, 2.0, 0.0}));
 }
 
-// Exposures of 0.1 and 0.3 have no finite binary fraction: added up in different orders they used to
-// give losses that differ in the last bit, and an atom fell apart.
+// Exposures of 0.1 and 0.3 have no finite binary fraction: added up in different orders they used
+// to give losses that differ in the last bit, and an atom fell apart.
 TEST(Simulation, EqualLossesAreEqualInWhateverOrderTheyAddUp) {
     auto const settings = support::one_index({0.3}, 0.1);
     support::Names names;

@@ -1,5 +1,5 @@
-// How many scenarios a second the judge does, beside the loop a textbook would write: the same book,
-// the same run.
+// How many scenarios a second the judge does, beside the loop a textbook would write: the same
+// book, the same run.
 
 #include "model/dependence.hpp"
 #include "model/migration.hpp"
@@ -85,8 +85,9 @@ int main() {
     double const textbook_rate =
         textbook_scenarios / seconds([&] { textbook_mean = textbook.losses(textbook_scenarios); });
 
-    fmt::print("{} names in {} cells, default_only; a mean loss, as a check that both do the same\n\n",
-               names.size(), cells.size());
+    fmt::print(
+        "{} names in {} cells, default_only; a mean loss, as a check that both do the same\n\n",
+        names.size(), cells.size());
     fmt::print("{:<10} {:>7} {:>12} {:>12} {:>8} {:>12}\n", "", "threads", "scenarios", "a second",
                "ratio", "mean loss");
     fmt::print("{:<10} {:>7} {:>12} {:>12.0f} {:>8.1f} {:>12.0f}\n", "textbook", 1,
@@ -96,8 +97,9 @@ int main() {
         constexpr std::size_t scenarios = 1'000'000;
         double mean = 0.0;
         double const rate = scenarios / seconds([&] {
-            for (double const loss : judge.losses(0, scenarios, count)) mean += loss / scenarios;
-        });
+                                for (double const loss : judge.losses(0, scenarios, count))
+                                    mean += loss / scenarios;
+                            });
         fmt::print("{:<10} {:>7} {:>12} {:>12.0f} {:>8.1f} {:>12.0f}\n", "judge", count, scenarios,
                    rate, rate / textbook_rate, mean);
     }

@@ -82,8 +82,8 @@ Names lender(std::size_t counterparties) {
         name.country = countries[bits() % countries.size()];
         // Exposures fall like a power of the rank: the largest name is about 1% of the whole.
         auto const rank = static_cast<double>(i);
-        name.exposure_at_default = *model::Money::from_units(
-            std::round(60e6 / std::pow(1.0 + rank / 20.0, 1.1)));
+        name.exposure_at_default =
+            *model::Money::from_units(std::round(60e6 / std::pow(1.0 + rank / 20.0, 1.1)));
         name.loss_at_default = 0.45 * name.exposure_at_default.units();
         names.push_back(std::make_shared<model::Name const>(std::move(name)));
     }

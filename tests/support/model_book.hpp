@@ -14,8 +14,8 @@ namespace support {
 
 using Names = std::vector<std::shared_ptr<model::Name const>>;
 
-// One index for all, one grade a default probability given, each of which a name keeps or leaves for
-// default; confidence 99.9%, 20,000 scenarios.
+// One index for all, one grade a default probability given, each of which a name keeps or leaves
+// for default; confidence 99.9%, 20,000 scenarios.
 model::Settings one_index(std::vector<double> const& default_probabilities,
                           double asset_correlation);
 
