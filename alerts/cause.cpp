@@ -61,11 +61,17 @@ model::Shared rates_moved(Stage const& before, Stage const& after) {
     return shared;
 }
 
+model::ExposureRow const* find_exposure(model::Inputs const* inputs, std::string const& id) {
+    if (inputs == nullptr) return nullptr;
+    auto const found =
+        std::ranges::lower_bound(inputs->exposures, id, {}, &model::ExposureRow::exposure_id);
+    return found != inputs->exposures.end() && found->exposure_id == id ? &*found : nullptr;
+}
+
 model::Inputs with_collateral_of(model::Inputs inputs, model::Inputs const* other) {
-    if (other == nullptr) return inputs;
     for (auto& row : inputs.exposures)
-        for (auto const& now : other->exposures)
-            if (now.exposure_id == row.exposure_id) row.collateral = now.collateral;
+        if (auto const* const now = find_exposure(other, row.exposure_id))
+            row.collateral = now->collateral;
     return inputs;
 }
 
@@ -221,11 +227,10 @@ private:
 };
 
 // The rows after the turn without what the firm itself chose to do in it.
-model::Inputs without_own_acts(model::Inputs const& before, model::Inputs after) {
+model::Inputs without_own_acts(model::Inputs const* before, model::Inputs after) {
     std::erase_if(after.exposures, [&](model::ExposureRow& row) {
-        auto const old =
-            std::ranges::find(before.exposures, row.exposure_id, &model::ExposureRow::exposure_id);
-        if (old == before.exposures.end()) return true;
+        auto const* const old = find_exposure(before, row.exposure_id);
+        if (old == nullptr) return true;
         double const committed = old->committed ? std::max(0.0, old->undrawn) : 0.0;
         double const granted = old->drawn + std::max(0.0, old->undrawn);
         row.drawn = std::min(row.drawn, std::max(old->drawn, old->drawn + committed));
@@ -241,7 +246,6 @@ std::vector<bool> Walk::inside_without_own_acts(
     std::vector<NamePtr> names;
     std::vector<model::NameFigures> figures;
     auto const& settings = *after_.book.settings();
-    static model::Inputs const nothing;
     for (auto const& pair : pairs_) {
         if (!pair.after) continue;
         if (pair.before == pair.after) {
@@ -249,10 +253,9 @@ std::vector<bool> Walk::inside_without_own_acts(
             figures.push_back(*pair.figures_after);
             continue;
         }
-        auto const* const old = before_.book.inputs(pair.after->counterparty_id);
+        auto const& id = pair.after->counterparty_id;
         auto name =
-            model::derive(without_own_acts(old != nullptr ? *old : nothing,
-                                           *after_.book.inputs(pair.after->counterparty_id)),
+            model::derive(without_own_acts(before_.book.inputs(id), *after_.book.inputs(id)),
                           after_.book.shared(), settings, after_.book.as_of());
         auto own = model::closed_form(name, settings, migration_after_);
         double const loss = pair.after->loss_at_default;
@@ -327,14 +330,18 @@ Explanation explain_at_start(Checks const* before, Usage const& after, Severity 
     return explanation;
 }
 
+std::string scaled(double value) {
+    double const size = std::abs(value);
+    if (size >= 999.5e6) return fmt::format("{:.2f} bn", value / 1e9);
+    if (size >= 999.5e3) return fmt::format("{:.1f} m", value / 1e6);
+    if (size >= 999.5) return fmt::format("{:.1f} k", value / 1e3);
+    return fmt::format("{:.4g}", value);
+}
+
 std::string readable(double value, Unit unit, std::string_view currency) {
     if (unit == Unit::fraction) return fmt::format("{:.3g}%", 100.0 * value);
     if (unit == Unit::index) return fmt::format("{:.4f}", value);
-    double const size = std::abs(value);
-    if (size >= 999.5e6) return fmt::format("{} {:.2f} bn", currency, value / 1e9);
-    if (size >= 999.5e3) return fmt::format("{} {:.1f} m", currency, value / 1e6);
-    if (size >= 999.5) return fmt::format("{} {:.1f} k", currency, value / 1e3);
-    return fmt::format("{} {:.0f}", currency, value);
+    return fmt::format("{} {}", currency, scaled(value));
 }
 
 std::string sentence(Alert const& alert, std::string_view subject_name, Cause const& cause,
@@ -357,8 +364,8 @@ std::string sentence(Alert const& alert, std::string_view subject_name, Cause co
     std::string text = fmt::format("{} of {} is {}", measure, who, amount(alert.observed));
     auto const severity = word(severity_words, alert.severity);
     if (alert.state == State::cured) {
-        text += fmt::format(", back inside {} and its release {}", alert.key.limit_id,
-                            amount(alert.level));
+        text += fmt::format(", back inside the level {} of {}", amount(alert.level),
+                            alert.key.limit_id);
     } else if (alert.state == State::withdrawn) {
         text += fmt::format("; the alert of {} is withdrawn: {}", alert.key.limit_id,
                             spaced(alert.end_reason));

@@ -82,7 +82,9 @@ std::vector<Explanation> explain(Stage before, Stage after,
 // The explanation where there is no book before: one part.
 Explanation explain_at_start(Checks const* before, Usage const& after, Severity severity);
 
-// "EUR 12.4 m", "2.5%", "0.0213": three digits for a reader; exact figures are in the tables.
+// Few digits for a reader; exact figures are in the tables. "12.4 m"; with its unit "EUR 12.4 m",
+// "2.5%", "0.0213".
+std::string scaled(double value);
 std::string readable(double value, Unit unit, std::string_view currency);
 
 // One sentence: who, what, over which level, since what, and whose act it was.

@@ -262,7 +262,10 @@ View::LevelValue View::level(LevelRule const& rule, Limit const& limit, SubjectK
     if (share.total == Total::portfolio) {
         double const total = totals_.at(limit.measure);
         if (!(total > 0.0)) return {.total_is_empty = true};
-        return {.value = share.fraction * total, .portfolio_share = share.fraction};
+        // A total that cannot be believed is a level that cannot.
+        return {.value = share.fraction * total,
+                .portfolio_share = share.fraction,
+                .held = anything_held_};
     }
     auto const capital = model::capital_in_force(shared_, word(total_words, share.total), day_);
     if (!capital) return {.held = Held::level_unknown};

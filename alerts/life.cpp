@@ -209,13 +209,6 @@ std::vector<Outcome> advance(Scene const& scene) {
     return outcomes;
 }
 
-std::optional<model::Time> due(std::span<Alert const> alerts) {
-    std::optional<model::Time> next;
-    for (auto const& alert : alerts)
-        if (alert.due_at && (!next || *alert.due_at < *next)) next = alert.due_at;
-    return next;
-}
-
 std::string life_table() {
     std::string text;
     for (auto const& row : transitions) {

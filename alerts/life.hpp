@@ -165,9 +165,6 @@ struct Scene {
 // table after another until none applies.
 std::vector<Outcome> advance(Scene const& scene);
 
-// The next instant at which time alone moves one of these alerts.
-std::optional<model::Time> due(std::span<Alert const> alerts);
-
 // The table as text, a line a row.
 std::string life_table();
 

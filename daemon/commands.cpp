@@ -38,7 +38,10 @@ constexpr std::string_view caution =
 
 // What every command is asked with.
 struct Common {
-    std::string config = "/etc/loadline";
+    std::string config = [] {
+        auto const* const folder = std::getenv("LOADLINE_CONFIG");
+        return std::string{folder != nullptr ? folder : "/etc/loadline"};
+    }();
     std::string format = "table";
 
     [[nodiscard]] Format as() const { return *alerts::find(format_words, format); }
@@ -111,17 +114,20 @@ int check_config(Common const& common) {
 }
 
 int schema_apply(Common const& common, bool install, bool print_only) {
-    if (print_only) {
+    if (install && print_only) {
         std::cout << schema_as_sql();
         return done;
     }
     auto const database = service_of(common).database;
     if (!install) {
         Connection connection{database, "schema", ""};
-        auto const problems = schema_problems(connection);
-        if (!problems.empty() && problems.front().find("not installed") != std::string::npos) {
-            std::cerr << problems.front() << '\n';
+        if (!is_installed(connection)) {
+            std::cerr << "the schema is not installed: run `loadline schema install`\n";
             return failed;
+        }
+        if (print_only) {
+            std::cout << missing_steps_as_sql(connection);
+            return done;
         }
     }
     auto const applied = apply_schema(database);
@@ -138,16 +144,17 @@ int schema_check(Common const& common) {
     return problems.empty() ? done : failed;
 }
 
-int assess(Common const& common, std::optional<std::uint64_t> seed) {
+int assess(Common const& common, std::optional<std::int64_t> seed) {
     auto const rules = or_refuse(config::load(common.config));
     start_log("warning");
     Connection asking{rules.service.database, "assess", "loadline_engine"};
     show_times_in(asking, rules.service.time_zone);
     Watch watch{rules, common.config};
     std::optional<Request> request;
-    for (;;) {
+    for (int round = 0;; ++round) {
         if (request && is_consumed(asking, *request)) break;
-        if (watch.pass_once(seed)) {
+        // The writer may end before it gets to the request: once a second, see if the lock is free.
+        if (round % 10 == 0 && watch.pass_once(seed)) {
             request.reset();
             break;
         }
@@ -255,7 +262,7 @@ int show_alert(Common const& common, std::int64_t alert_id) {
         return done;
     }
     auto const cause = cause_of(*row.at(0, "cause"));
-    std::cout << sentence_of(row, cause) << "\n\n";
+    std::cout << visible(sentence_of(row, cause)) << "\n\n";
     print_one(std::cout, row, Format::table);
     auto const position = [](alerts::Position const& at) {
         return fmt::format("observed {}, level {}", readable_figure(fmt::format("{}", at.observed)),
@@ -357,7 +364,12 @@ int show_risk(Common const& common, std::optional<std::string> const& counterpar
 
 int show_usage(Common const& common, std::optional<std::string> const& limit_id) {
     auto connection = open(common, "loadline_reader", "usage");
-    print(std::cout, read_usage(connection, limit_id), common.as());
+    auto const rows = read_usage(connection, limit_id);
+    if (limit_id && rows.rows.empty()) {
+        std::cerr << fmt::format("no usage of a limit {}: `loadline usage` lists all\n", *limit_id);
+        return failed;
+    }
+    print(std::cout, rows, common.as());
     return done;
 }
 
@@ -375,13 +387,13 @@ int show_set_aside(Common const& common) {
 
 int answer(std::function<int()> const& command) {
     try {
-        return command();
+        int const code = command();
+        if (std::cout.flush()) return code;
+        std::cerr << "loadline: the output could not be written\n";
     } catch (Misconfigured const&) {
         return misused;
-    } catch (DatabaseError const& error) {
-        std::cerr << "loadline: " << error.what() << '\n';
     } catch (std::exception const& error) {
-        std::cerr << "loadline: " << error.what() << '\n';
+        std::cerr << "loadline: " << visible(error.what()) << '\n';
     }
     return failed;
 }
@@ -400,9 +412,8 @@ int run(int argc, char** argv) {
                          std::string const& example) {
         auto* const sub = parent.add_subcommand(name, does);
         sub->add_option("--config", common.config,
-                        "folder with service.yaml, model.yaml, limits.yaml")
-            ->envname("LOADLINE_CONFIG")
-            ->capture_default_str();
+                        "folder with service.yaml, model.yaml, limits.yaml; else LOADLINE_CONFIG, "
+                        "else /etc/loadline");
         sub->add_option("--format", common.format, "table, csv or json")
             ->check(CLI::IsMember({"table", "csv", "json"}))
             ->capture_default_str();
@@ -440,10 +451,11 @@ int run(int argc, char** argv) {
         "loadline schema check")
         ->callback([&] { command = [&] { return schema_check(common); }; });
 
-    std::optional<std::uint64_t> seed;
+    std::optional<std::int64_t> seed;
     auto* const pass = add(app, "assess", "one pass over the whole book, then exit",
                            "loadline assess --format json");
-    pass->add_option("--seed", seed, "random numbers of another seed than model.yaml's");
+    pass->add_option("--seed", seed, "random numbers of another seed than model.yaml's")
+        ->check(CLI::NonNegativeNumber);
     pass->callback([&] { command = [&] { return assess(common, seed); }; });
 
     add(app, "check-config",

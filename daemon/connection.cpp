@@ -25,10 +25,17 @@ Trouble trouble_of(std::string_view sqlstate) {
     return Trouble::ours;
 }
 
-// The server's text without the statement it quotes.
+// The first line of a message.
 std::string first_line(std::string_view text) {
     while (!text.empty() && (text.back() == '\n' || text.back() == ' ')) text.remove_suffix(1);
     return std::string{text.substr(0, text.find('\n'))};
+}
+
+// What the server says, without its severity and the statement it quotes.
+std::string said_by(pqxx::sql_error const& error) {
+    auto message = first_line(error.what());
+    if (message.starts_with("ERROR:")) message.erase(0, message.find_first_not_of(' ', 6));
+    return message;
 }
 
 }  // namespace
@@ -43,10 +50,17 @@ public:
 void rethrow_sorted() {
     try {
         throw;
+    } catch (pqxx::insufficient_privilege const& error) {  // libpqxx 6.4 leaves out its SQLSTATE
+        throw DatabaseError{Trouble::denied, "42501", said_by(error)};
+    } catch (pqxx::insufficient_resources const& error) {
+        throw DatabaseError{Trouble::busy, "53000", said_by(error)};
+    } catch (pqxx::unique_violation const& error) {
+        throw DatabaseError{Trouble::retry, "23505", said_by(error)};
+    } catch (pqxx::undefined_table const& error) {
+        throw DatabaseError{Trouble::usage, "42P01",
+                            said_by(error) + ": run `loadline schema install` first"};
     } catch (pqxx::sql_error const& error) {
-        auto message = first_line(error.what());
-        if (message.starts_with("ERROR:")) message.erase(0, message.find_first_not_of(' ', 6));
-        throw DatabaseError{trouble_of(error.sqlstate()), error.sqlstate(), message};
+        throw DatabaseError{trouble_of(error.sqlstate()), error.sqlstate(), said_by(error)};
     } catch (pqxx::serialization_failure const& error) {
         throw DatabaseError{Trouble::retry, "40001", first_line(error.what())};
     } catch (pqxx::deadlock_detected const& error) {

@@ -1,5 +1,7 @@
 #include "daemon/print.hpp"
 
+#include "alerts/cause.hpp"
+
 #include <fmt/format.h>
 #include <nlohmann/json.hpp>
 
@@ -35,19 +37,6 @@ std::vector<std::string> items_of(std::string_view array) {
     }
     if (!item.empty()) items.push_back(std::move(item));
     return items;
-}
-
-// Control characters are shown, not obeyed.
-std::string visible(std::string_view text) {
-    std::string shown;
-    for (char const c : text) {
-        auto const byte = static_cast<unsigned char>(c);
-        if (byte < 0x20 || byte == 0x7f)
-            shown += fmt::format("\\x{:02X}", byte);
-        else
-            shown += c;
-    }
-    return shown;
 }
 
 std::string for_reader(Column const& column, Cell const& cell) {
@@ -152,15 +141,23 @@ Json json_rows(Rows const& rows) {
 
 }  // namespace
 
+std::string visible(std::string_view text) {
+    std::string shown;
+    for (char const c : text) {
+        auto const byte = static_cast<unsigned char>(c);
+        if (byte < 0x20 || byte == 0x7f)
+            shown += fmt::format("\\x{:02X}", byte);
+        else
+            shown += c;
+    }
+    return shown;
+}
+
 std::string readable_figure(std::string const& exact) {
     double value = 0.0;
     auto const [end, error] = std::from_chars(exact.data(), exact.data() + exact.size(), value);
     if (error != std::errc{} || !std::isfinite(value)) return exact;
-    double const size = std::abs(value);
-    if (size >= 999.5e6) return fmt::format("{:.2f} bn", value / 1e9);
-    if (size >= 999.5e3) return fmt::format("{:.1f} m", value / 1e6);
-    if (size >= 999.5) return fmt::format("{:.1f} k", value / 1e3);
-    return fmt::format("{:.4g}", value);
+    return alerts::scaled(value);
 }
 
 void print(std::ostream& out, Rows const& rows, Format format) {

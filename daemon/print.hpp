@@ -25,6 +25,9 @@ void print_one(std::ostream& out, Rows const& rows, Format format);
 std::string json_object(Rows const& rows,
                         std::span<std::pair<std::string, Rows> const> inside = {});
 
+// Control characters are shown, not obeyed.
+std::string visible(std::string_view text);
+
 // A figure for a reader: four digits, with k, m or bn. Exact values are in CSV and JSON.
 std::string readable_figure(std::string const& exact);
 

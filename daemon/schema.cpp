@@ -5,7 +5,9 @@
 #include <fmt/format.h>
 #include <pqxx/pqxx>
 
+#include <algorithm>
 #include <map>
+#include <optional>
 
 namespace process {
 namespace {
@@ -74,6 +76,14 @@ std::vector<std::string> contradictions(std::map<int, Applied> const& applied) {
     return problems;
 }
 
+// Names are UTF-8 throughout; a database that does not know its texts' encoding cannot promise it.
+std::optional<std::string> encoding_problem(pqxx::transaction_base& work) {
+    auto const encoding = work.exec1("SHOW server_encoding")[0].as<std::string>();
+    if (encoding == "UTF8") return std::nullopt;
+    return fmt::format("the database's encoding is {}: use one created with ENCODING 'UTF8'",
+                       encoding);
+}
+
 std::string record_of(SchemaStep const& step, pqxx::transaction_base const* work) {
     auto const quoted = [&](std::string_view text) {
         return work != nullptr ? work->quote(std::string{text}) : fmt::format("'{}'", text);
@@ -85,12 +95,14 @@ std::string record_of(SchemaStep const& step, pqxx::transaction_base const* work
 
 }  // namespace
 
-std::vector<std::string> apply_schema(std::string const& database) {
+std::vector<std::string> apply_schema(std::string const& database) try {
     Connection connection{database, "schema", ""};
     return sorted([&] {
         auto& session = connection.session();
         {
             pqxx::work work{session};
+            if (auto const problem = encoding_problem(work))
+                throw DatabaseError{Trouble::usage, "55000", *problem};
             work.exec("SELECT pg_advisory_lock(1819238756, 3)");
             work.exec(std::string{ground});
             work.commit();
@@ -115,15 +127,29 @@ std::vector<std::string> apply_schema(std::string const& database) {
         }
         return names;
     });
+} catch (DatabaseError const& error) {
+    if (error.trouble() != Trouble::denied) throw;
+    throw DatabaseError{
+        Trouble::denied, error.sqlstate(),
+        fmt::format("{}: the installing login needs CREATEROLE and CREATE on the database; "
+                    "`loadline schema install --print` writes the SQL for one who has them",
+                    error.what())};
+}
+
+bool is_installed(Connection& connection) {
+    return sorted([&] {
+        pqxx::nontransaction work{connection.session()};
+        return !applied_steps(work).empty();
+    });
 }
 
 std::vector<std::string> schema_problems(Connection& connection) {
     return sorted([&]() -> std::vector<std::string> {
         pqxx::nontransaction work{connection.session()};
-        if (work.exec1("SELECT to_regclass('loadline.schema_step') IS NULL")[0].as<bool>())
-            return {"the schema is not installed: run `loadline schema install`"};
         auto const applied = applied_steps(work);
+        if (applied.empty()) return {"the schema is not installed: run `loadline schema install`"};
         auto problems = contradictions(applied);
+        if (auto const problem = encoding_problem(work)) problems.push_back(*problem);
         for (auto const& step : schema_steps())
             if (!applied.contains(step.number))
                 problems.push_back(
@@ -145,17 +171,35 @@ std::vector<std::string> schema_problems(Connection& connection) {
     });
 }
 
+namespace {
+
+std::string as_sql(SchemaStep const& step) {
+    return fmt::format(
+        "\n-- step {}: {}\nBEGIN;\nSET LOCAL ROLE loadline_owner;\n{}\n"
+        "SET LOCAL ROLE loadline_owner;\n{};\nCOMMIT;\n",
+        step.number, step.name, step.text, record_of(step, nullptr));
+}
+
+}  // namespace
+
 std::string schema_as_sql() {
     std::string text = fmt::format(
         "-- Run as the login that shall install: psql --set ON_ERROR_STOP=1 --file THIS_FILE\n"
         "BEGIN;\n{}COMMIT;\n",
         ground);
-    for (auto const& step : schema_steps())
-        text += fmt::format(
-            "\n-- step {}: {}\nBEGIN;\nSET LOCAL ROLE loadline_owner;\n{}\n"
-            "SET LOCAL ROLE loadline_owner;\n{};\nCOMMIT;\n",
-            step.number, step.name, step.text, record_of(step, nullptr));
+    for (auto const& step : schema_steps()) text += as_sql(step);
     return text;
+}
+
+std::string missing_steps_as_sql(Connection& connection) {
+    return sorted([&] {
+        pqxx::nontransaction work{connection.session()};
+        auto const applied = applied_steps(work);
+        std::string text;
+        for (auto const& step : schema_steps())
+            if (!applied.contains(step.number)) text += as_sql(step);
+        return text;
+    });
 }
 
 }  // namespace process

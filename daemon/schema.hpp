@@ -28,7 +28,11 @@ std::vector<std::string> apply_schema(std::string const& database);
 // What keeps this program from working on the database; empty when all is well.
 std::vector<std::string> schema_problems(Connection& connection);
 
-// All of it as SQL, for those who run it themselves.
+// Whether any step has been applied.
+bool is_installed(Connection& connection);
+
+// As SQL for those who run it themselves: everything, or the steps an installed schema lacks.
 std::string schema_as_sql();
+std::string missing_steps_as_sql(Connection& connection);
 
 }  // namespace process

@@ -36,8 +36,9 @@ std::string text_of(pqxx::field const& field) {
     return std::string{view(field)};
 }
 
+// Feeds write nothing as NULL or as an empty text.
 std::optional<std::string> maybe_text(pqxx::field const& field) {
-    return field.is_null() ? std::nullopt : std::optional{text_of(field)};
+    return field.size() == 0 ? std::nullopt : std::optional{text_of(field)};
 }
 
 // Any number PostgreSQL writes; what a double cannot hold becomes infinite, never another number.
@@ -735,7 +736,8 @@ Rows rows_of(pqxx::result const& result) {
         rows.columns.push_back({result.column_name(column), kind_of(result.column_type(column))});
     for (auto const& row : result) {
         auto& cells = rows.rows.emplace_back();
-        for (auto const& field : row) cells.push_back(maybe_text(field));
+        for (auto const& field : row)
+            cells.push_back(field.is_null() ? std::nullopt : Cell{text_of(field)});
     }
     return rows;
 }
@@ -856,8 +858,8 @@ Rows read_assessment(Connection& connection, std::optional<std::int64_t> after_s
                credit_var, credit_var_error, expected_shortfall, expected_shortfall_error,
                book_digest, limits_digest, model_digest, plan
         FROM loadline.assessment
-        WHERE $1::bigint IS NULL OR sequence > $1::bigint
-        ORDER BY CASE WHEN $1::bigint IS NULL THEN -sequence ELSE sequence END LIMIT 1)sql",
+        WHERE sequence > coalesce($1::bigint, 0)
+        ORDER BY $1::bigint IS NOT NULL AND trigger = 'command' DESC, sequence DESC LIMIT 1)sql",
                             time_column("as_of", "as_of")),
                 pointer(after));
 }

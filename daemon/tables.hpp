@@ -124,7 +124,7 @@ Rows read_risk(Connection& connection, std::optional<std::string> const& counter
 Rows read_facilities(Connection& connection, std::string const& counterparty_id);
 Rows read_usage(Connection& connection, std::optional<std::string> const& limit_id);
 Rows read_set_aside(Connection& connection);
-// The newest assessment, or the one that consumed a request.
+// The newest assessment; after a request was consumed, the newest that one was asked for since.
 Rows read_assessment(Connection& connection, std::optional<std::int64_t> after_sequence);
 
 // Times are shown in this zone.

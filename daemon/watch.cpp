@@ -2,6 +2,7 @@
 
 #include "daemon/calendar.hpp"
 #include "daemon/digest.hpp"
+#include "daemon/print.hpp"
 #include "daemon/schema.hpp"
 
 #include <fmt/format.h>
@@ -31,11 +32,25 @@ RulesDigests digests_of(config::Rules const& rules) {
             digest_of(rules.limits_files)};
 }
 
-bool is_explained_by_the_book(alerts::Event event) {
+// A value inside quotes on a line of the log.
+std::string in_log(std::string_view text) {
+    std::string line;
+    for (char const c : visible(text)) {
+        if (c == '"') line += '\\';
+        line += c;
+    }
+    return line;
+}
+
+bool is_an_excess(alerts::Event event) {
     using alerts::Event;
     return event == Event::opened || event == Event::waived || event == Event::raised ||
-           event == Event::eased || event == Event::worse || event == Event::cured ||
-           event == Event::waiver_exceeded;
+           event == Event::worse || event == Event::waiver_exceeded;
+}
+
+bool is_explained_by_the_book(alerts::Event event) {
+    using alerts::Event;
+    return is_an_excess(event) || event == Event::eased || event == Event::cured;
 }
 
 // The outcomes with their explanations: book against book, or found at the start.
@@ -67,12 +82,18 @@ std::vector<ExplainedOutcome> explained(std::vector<alerts::Outcome> outcomes,
                 all[i].explanation =
                     alerts::explain_at_start(&checks_before, *usage, all[i].outcome.alert.severity);
     }
-    for (auto& [outcome, explanation] : all)
+    for (auto& [outcome, explanation] : all) {
+        // Whose act an easing is says nothing about whose act the excess was.
+        if (explanation && !std::ranges::any_of(outcome.moves, [](alerts::Move const& move) {
+                return is_an_excess(move.transition->event);
+            }))
+            explanation->nature.reset();
         if (outcome.alert.state == alerts::State::cured) {
             auto const part = explanation ? explanation->cause.largest() : std::nullopt;
             outcome.alert.end_reason =
                 word(alerts::part_words, part.value_or(alerts::Part::portfolio));
         }
+    }
     return all;
 }
 
@@ -90,16 +111,17 @@ void log_moves(std::span<ExplainedOutcome const> outcomes, model::Book const& bo
     for (auto const& [outcome, explanation] : outcomes)
         for (auto const& move : outcome.moves)
             spdlog::info(
-                "event={} limit={} subject_kind={} subject={} from={} to={} severity={} "
+                "event={} limit={} subject_kind={} subject=\"{}\" from={} to={} severity={} "
                 "reason=\"{}\" text=\"{}\"",
                 word(alerts::event_words, move.transition->event), outcome.alert.key.limit_id,
-                word(alerts::subject_kind_words, outcome.alert.key.kind), outcome.alert.key.subject,
-                word(alerts::state_words, move.from), word(alerts::state_words, move.to),
-                word(alerts::severity_words, move.severity), move.transition->reason,
-                sentence(outcome.alert, called(outcome.alert.key, book),
-                         explanation ? explanation->cause : alerts::Cause{},
-                         explanation ? explanation->nature : std::nullopt,
-                         book.settings()->base_currency));
+                word(alerts::subject_kind_words, outcome.alert.key.kind),
+                in_log(outcome.alert.key.subject), word(alerts::state_words, move.from),
+                word(alerts::state_words, move.to), word(alerts::severity_words, move.severity),
+                move.transition->reason,
+                in_log(sentence(outcome.alert, called(outcome.alert.key, book),
+                                explanation ? explanation->cause : alerts::Cause{},
+                                explanation ? explanation->nature : std::nullopt,
+                                book.settings()->base_currency)));
 }
 
 // Each once, when it begins.
@@ -108,9 +130,9 @@ void log_unmeasured(alerts::Checks const& checks, alerts::Checks const& before) 
     std::ranges::set_difference(checks.unmeasured, before.unmeasured, std::back_inserter(begun), {},
                                 &alerts::Unmeasured::key, &alerts::Unmeasured::key);
     for (auto const& row : begun)
-        spdlog::info("event=unmeasured limit={} subject_kind={} subject={} reason=\"{}\"",
+        spdlog::info("event=unmeasured limit={} subject_kind={} subject=\"{}\" reason=\"{}\"",
                      row.key.limit_id, word(alerts::subject_kind_words, row.key.kind),
-                     row.key.subject, row.reason);
+                     in_log(row.key.subject), row.reason);
 }
 
 }  // namespace
@@ -139,7 +161,6 @@ void Watch::request_reload() {
 
 void Watch::run(std::stop_token stop) {
     auto pause = std::chrono::milliseconds{first_wait};
-    int retries = 0;
     bool worked_once = false;
     while (!stop.stop_requested()) {
         try {
@@ -148,21 +169,18 @@ void Watch::run(std::stop_token stop) {
             if (!known_) turn(Trigger::start);
             worked_once = true;
             pause = first_wait;
-            retries = 0;
             while (auto const trigger = wait_for_change(stop)) turn(*trigger);
         } catch (DatabaseError const& error) {
             forget();
             auto const trouble = error.trouble();
             bool const passes = trouble == Trouble::lost || trouble == Trouble::busy ||
-                                (trouble == Trouble::retry && ++retries <= retries_at_most) ||
+                                trouble == Trouble::retry ||
                                 (trouble == Trouble::denied && worked_once);
             if (!passes) throw;
-            if (trouble != Trouble::retry) {
-                tables_.reset();
-                hints_.reset();
-            }
+            tables_.reset();
+            hints_.reset();
             spdlog::warn("event=database_trouble sqlstate={} wait_ms={} text=\"{}\"",
-                         error.sqlstate(), pause.count(), error.what());
+                         error.sqlstate(), pause.count(), in_log(error.what()));
             wait(pause);
             pause = std::min<std::chrono::milliseconds>(2 * pause, longest_wait);
         }
@@ -170,10 +188,10 @@ void Watch::run(std::stop_token stop) {
     spdlog::info("event=stopped");
 }
 
-bool Watch::pass_once(std::optional<std::uint64_t> seed) {
+bool Watch::pass_once(std::optional<std::int64_t> seed) {
     if (seed) {
         auto settings = *rules_.model;
-        settings.simulation.seed = *seed;
+        settings.simulation.seed = static_cast<std::uint64_t>(*seed);
         rules_.model = std::make_shared<model::Settings const>(std::move(settings));
     }
     Connection writer{rules_.service.database, "assess", "loadline_engine"};
@@ -181,15 +199,8 @@ bool Watch::pass_once(std::optional<std::uint64_t> seed) {
         throw DatabaseError{Trouble::usage, "55000", problems.front()};
     if (!writer.try_writer_lock()) return false;
     tables_ = std::make_unique<Tables>(std::move(writer));
-    for (int retries = 0;; ++retries) {
-        try {
-            turn(Trigger::command);
-            return true;
-        } catch (DatabaseError const& error) {
-            if (error.trouble() != Trouble::retry || retries == retries_at_most) throw;
-            std::this_thread::sleep_for(first_wait);
-        }
-    }
+    turn(Trigger::command);
+    return true;
 }
 
 // One path for start and reconnect: schema, hints, lock; the first turn then reads everything.
@@ -238,7 +249,7 @@ bool Watch::reload() {
     auto loaded = config::load(folder_);
     if (auto const* const faults = std::get_if<std::vector<config::Fault>>(&loaded)) {
         for (auto const& fault : *faults)
-            spdlog::error("event=config_fault text=\"{}\"", fault.text());
+            spdlog::error("event=config_fault text=\"{}\"", in_log(fault.text()));
         spdlog::error("event=config_refused faults={} text=\"the files in force go on ruling\"",
                       faults->size());
         return false;
@@ -265,20 +276,33 @@ void Watch::forget() {
     known_.reset();
 }
 
+// A turn that lost a race is tried again on the book as it was: its transaction is surely undone.
+// Any other end without a commit throws the book away.
 void Watch::turn(Trigger trigger) {
-    auto const began = std::chrono::steady_clock::now();
     auto const& zone = rules_.service.time_zone;
-    auto turn = tables_->begin();
-    model::Instant const as_of{turn.as_of(), day_of(turn.as_of(), zone)};
-    try {
-        decide(turn, trigger, as_of);
-    } catch (...) {
-        forget();
-        throw;
+    for (int retries = 0;; ++retries) {
+        try {
+            auto turn = tables_->begin();
+            auto const began = std::chrono::steady_clock::now();
+            model::Instant const as_of{turn.as_of(), day_of(turn.as_of(), zone)};
+            decide(turn, trigger, as_of);
+            auto next = start_of(as_of.day + std::chrono::days{1}, zone);
+            if (auto const rating = known_->book.due()) next = std::min(next, *rating);
+            due_ = began + (next - as_of.at);
+            return;
+        } catch (DatabaseError const& error) {
+            if (error.trouble() != Trouble::retry || retries == retries_at_most) {
+                forget();
+                throw;
+            }
+            spdlog::info("event=turn_retried sqlstate={} text=\"{}\"", error.sqlstate(),
+                         in_log(error.what()));
+            std::this_thread::sleep_for(first_wait);
+        } catch (...) {
+            forget();
+            throw;
+        }
     }
-    auto next = start_of(as_of.day + std::chrono::days{1}, zone);
-    if (auto const rating = known_->book.due()) next = std::min(next, *rating);
-    due_ = began + (next - as_of.at);
 }
 
 // From the changes to the alert rows; what a commit has made true becomes known.
@@ -325,9 +349,7 @@ void Watch::decide(Turn& turn, Trigger trigger, model::Instant as_of) {
                now.book, *now.figures, now.checks, written);
     turn.commit();
 
-    for (auto const& unmeasured : now.checks.unmeasured)
-        spdlog::debug("event=unmeasured limit={} subject={} reason=\"{}\"", unmeasured.key.limit_id,
-                      unmeasured.key.subject, unmeasured.reason);
+    log_unmeasured(now.checks, known_ ? known_->checks : alerts::Checks{});
     log_moves(written, now.book);
     spdlog::info("event=assessed trigger={} changes={} names={} usages={} moved={}",
                  word(trigger_words, trigger), changes.consumed, now.book.names().size(),

@@ -39,7 +39,7 @@ public:
 
     // One whole pass with the lock held, and no more. `seed` replaces model.yaml's. Nothing when
     // another process holds the writer's lock.
-    bool pass_once(std::optional<std::uint64_t> seed);
+    bool pass_once(std::optional<std::int64_t> seed);
 
     // From another thread: read the files again, and look up from any wait.
     void request_reload();

@@ -12,8 +12,28 @@
 namespace model {
 namespace {
 
-// Beyond this a single amount is a mistake, not a loan; sums of many such still fit Money.
+// Beyond this a single amount is a mistake, not a loan.
 constexpr double largest_amount = 1e14;
+
+// The domain of an exchange rate: between any two currencies in use there are fewer zeros.
+constexpr double smallest_rate = 1e-7;
+constexpr double largest_rate = 1e7;
+
+// Longer codes than this fit no index, and no reader.
+constexpr std::size_t longest_code = 200;
+
+// A value as a reason or key shows it: its beginning, cut between characters.
+std::string shown(std::string_view text, std::size_t longest) {
+    if (text.size() <= longest) return std::string{text};
+    while (longest > 0 && (static_cast<unsigned char>(text[longest]) & 0xC0U) == 0x80U) --longest;
+    return std::string{text.substr(0, longest)} + "…";
+}
+
+std::string key_of(std::initializer_list<std::string_view> parts) {
+    std::string key;
+    for (auto const part : parts) key += (key.empty() ? "" : "/") + shown(part, longest_code);
+    return key;
+}
 
 // Words with a meaning of their own in limits.yaml and in the rating table.
 bool is_reserved(std::string_view code) {
@@ -22,9 +42,10 @@ bool is_reserved(std::string_view code) {
 
 // Codes become subjects; a comma joins two of them, and control characters hide from the reader.
 bool is_usable_code(std::string_view code) {
-    return !code.empty() && !is_reserved(code) && std::ranges::none_of(code, [](char c) {
-        return c == ',' || static_cast<unsigned char>(c) < 0x20 || c == 0x7f;
-    });
+    return !code.empty() && code.size() <= longest_code && !is_reserved(code) &&
+           std::ranges::none_of(code, [](char c) {
+               return c == ',' || static_cast<unsigned char>(c) < 0x20 || c == 0x7f;
+           });
 }
 
 // ISO 17442: 18 letters and digits and two check digits, 1 modulo 97 by ISO 7064 with A = 10.
@@ -53,7 +74,7 @@ std::optional<std::string> fault_of(std::string_view id, CounterpartyRow const& 
                                     std::string_view sector, std::string_view country) {
     auto const bad = [](std::string_view what) {
         return std::string(what) +
-               " is empty, a reserved word, or has a comma or a control character";
+               " is empty, too long, a reserved word, or has a comma or a control character";
     };
     if (!is_usable_code(id)) return bad("counterparty_id");
     if (!is_usable_code(row.segment)) return bad("segment");
@@ -75,7 +96,7 @@ Row const* newest(std::vector<Row> const& rows, When not_in_future, Usable usabl
 }
 
 bool is_usable_rate(RateRow const& row) {
-    return std::isfinite(row.base_per_unit) && row.base_per_unit > 0.0;
+    return row.base_per_unit >= smallest_rate && row.base_per_unit <= largest_rate;
 }
 bool is_usable_capital(CapitalRow const& row) {
     return std::isfinite(row.amount) && row.amount > 0.0 && row.amount < largest_amount;
@@ -100,11 +121,11 @@ RatingInUse rating_in_use(Inputs const& inputs, Settings const& settings, Instan
                 return row.grade == "withdrawn" || settings.grades.find(row.grade).has_value();
             },
             [&](RatingRow const& row) {
-                set_aside.push_back({.source_table = "rating",
-                                     .source_key = inputs.counterparty_id + "/" + row.source + "/" +
-                                                   iso(row.rated_at),
-                                     .reason = "grade '" + row.grade + "' is not of the scale",
-                                     .amount = std::nullopt});
+                set_aside.push_back(
+                    {.source_table = "rating",
+                     .source_key = key_of({inputs.counterparty_id, row.source, iso(row.rated_at)}),
+                     .reason = "grade '" + shown(row.grade, 60) + "' is not of the scale",
+                     .amount = std::nullopt});
             });
         if (rating == nullptr) continue;
         if (rating->grade == "withdrawn") {
@@ -175,10 +196,10 @@ Amounts amounts_of(ExposureRow const& row, RateInForce rate, Settings const& set
     };
 }
 
+// Sums of amounts in range; absurdly many of them stay at the largest.
 Money rounded(double units) {
-    auto const money = Money::from_units(units);
-    if (!money) throw std::overflow_error("an exposure is out of range");
-    return *money;
+    auto const largest = Money::from_units(9.2e15);
+    return Money::from_units(units).value_or(*largest);
 }
 
 // Adds a netting set's exposure at default, spread over its facilities, to the name.
@@ -224,20 +245,22 @@ std::vector<Amounts> usable_exposures(Inputs const& inputs, Shared const& shared
         auto fault = fault_of(row);
         Held held = Held::row_set_aside;
         if (!fault && !rate) {
-            fault = "no exchange rate for " + row.currency;
+            fault = "no exchange rate for " + shown(row.currency, 60);
             held = Held::rate_missing;
         }
         std::optional<Amounts> amounts;
         if (rate) {
             amounts = amounts_of(row, *rate, settings, day);
-            if (!fault && !(std::abs(amounts->facility) + amounts->collateral < largest_amount))
+            double const size =
+                std::max({std::abs(amounts->facility), amounts->collateral, amounts->commitment});
+            if (!fault && !(size < largest_amount))
                 fault = "the amount in base currency is out of range";
         }
-        if (!fault && !name.known) fault = "no counterparty " + inputs.counterparty_id;
+        if (!fault && !name.known) fault = "no counterparty " + shown(inputs.counterparty_id, 60);
         if (fault) {
             std::optional<double> amount;
             if (amounts && std::isfinite(amounts->facility)) amount = amounts->facility;
-            name.set_aside.push_back({"exposure", row.exposure_id, *fault, amount, held});
+            name.set_aside.push_back({"exposure", key_of({row.exposure_id}), *fault, amount, held});
             continue;
         }
         name.held = std::max(name.held, rate->held);
@@ -247,18 +270,19 @@ std::vector<Amounts> usable_exposures(Inputs const& inputs, Shared const& shared
 }
 
 void add_exposures(std::vector<Amounts> usable, Name& name) {
-    auto const own_set = [](Amounts const& a) {
-        return a.row->netting_set ? std::tuple(1, *a.row->netting_set)
-                                  : std::tuple(0, a.row->exposure_id);
+    // A facility without a netting set is its own.
+    auto const set_of = [](Amounts const& a) {
+        return a.row->netting_set ? std::tuple(1, std::string_view{*a.row->netting_set})
+                                  : std::tuple(0, std::string_view{a.row->exposure_id});
     };
     std::ranges::sort(usable, [&](Amounts const& a, Amounts const& b) {
-        return std::tuple(own_set(a), a.row->exposure_id) <
-               std::tuple(own_set(b), b.row->exposure_id);
+        return std::tuple(set_of(a), std::string_view{a.row->exposure_id}) <
+               std::tuple(set_of(b), std::string_view{b.row->exposure_id});
     });
     double commitment = 0.0;
     for (auto first = usable.begin(); first != usable.end();) {
         auto const last = std::find_if(
-            first, usable.end(), [&](Amounts const& a) { return own_set(a) != own_set(*first); });
+            first, usable.end(), [&](Amounts const& a) { return set_of(a) != set_of(*first); });
         add_netting_set({first, last}, name);
         for (; first != last; ++first) commitment += first->commitment;
     }
@@ -274,9 +298,12 @@ void add_memberships(Inputs const& inputs, Day day, Name& name) {
         if (usable && name.known) continue;
         name.set_aside.push_back(
             {.source_table = "group_member",
-             .source_key = row.group_id + "/" + inputs.counterparty_id + "/" + iso(row.valid_from),
-             .reason = usable ? "no counterparty " + inputs.counterparty_id
-                              : "group_id has a comma or a control character",
+             .source_key = key_of({row.group_id, inputs.counterparty_id, iso(row.valid_from)}),
+             .reason =
+                 usable
+                     ? "no counterparty " + shown(inputs.counterparty_id, 60)
+                     : "group_id is empty, too long, a reserved word, or has a comma or a control "
+                       "character",
              .amount = std::nullopt});
     }
     std::ranges::sort(name.groups);
@@ -289,8 +316,8 @@ void set_ratings_aside(Inputs const& inputs, Name& name) {
     for (auto const& row : inputs.ratings)
         name.set_aside.push_back(
             {.source_table = "rating",
-             .source_key = inputs.counterparty_id + "/" + row.source + "/" + iso(row.rated_at),
-             .reason = "no counterparty " + inputs.counterparty_id,
+             .source_key = key_of({inputs.counterparty_id, row.source, iso(row.rated_at)}),
+             .reason = "no counterparty " + shown(inputs.counterparty_id, 60),
              .amount = std::nullopt});
 }
 
@@ -335,7 +362,7 @@ Name derive(Inputs const& inputs, Shared const& shared, Settings const& settings
         name.country = code_or_unknown(row.country_of_risk ? row.country_of_risk : row.country);
         if (auto fault = fault_of(inputs.counterparty_id, row, name.sector, name.country)) {
             name.set_aside.push_back(
-                {"counterparty", inputs.counterparty_id, *fault, std::nullopt});
+                {"counterparty", key_of({inputs.counterparty_id}), *fault, std::nullopt});
         } else {
             name.known = true;
         }
@@ -396,6 +423,7 @@ bool Book::apply(Changes changes, std::shared_ptr<Settings const> settings, Inst
             inputs.memberships.empty())
             continue;
         std::ranges::sort(inputs.ratings, {}, &RatingRow::rated_at);
+        std::ranges::sort(inputs.exposures, {}, &ExposureRow::exposure_id);
         merged.push_back({std::make_shared<Inputs const>(std::move(inputs)), nullptr});
     }
     for (; old != entries_.end(); ++old) keep(*old);
@@ -427,8 +455,8 @@ std::vector<SetAside> Book::set_aside() const {
         newest(
             rates, [&](RateRow const& row) { return row.quoted_on <= as_of_.day; }, is_usable_rate,
             [&](RateRow const& row) {
-                rows.push_back({"fx_rate", currency + "/" + iso(row.quoted_on),
-                                "base_per_unit is not a number above 0", std::nullopt});
+                rows.push_back({"fx_rate", key_of({currency, iso(row.quoted_on)}),
+                                "base_per_unit is not a number from 1e-7 to 1e7", std::nullopt});
             });
     for (auto const& [kind, amounts] : shared_->capital)
         newest(

@@ -70,8 +70,8 @@ struct MemberRow {
 struct Inputs {
     std::string counterparty_id;
     std::optional<CounterpartyRow> row;
-    std::vector<RatingRow> ratings;
-    std::vector<ExposureRow> exposures;
+    std::vector<RatingRow> ratings;      // in a book: by rated_at
+    std::vector<ExposureRow> exposures;  // in a book: by exposure_id
     std::vector<MemberRow> memberships;
     Digest digest;  // of all these rows
 };

@@ -1,12 +1,12 @@
 #pragma once
 
+#include <algorithm>
 #include <array>
 #include <chrono>
 #include <cmath>
 #include <compare>
 #include <cstdint>
 #include <optional>
-#include <stdexcept>
 #include <string>
 #include <string_view>
 #include <utility>
@@ -27,7 +27,7 @@ public:
     // The nearest thousandth, half to even. Nothing for what is not finite or out of range.
     static std::optional<Money> from_units(double units) {
         double const scaled = std::nearbyint(units * 1000.0);
-        if (!(std::abs(scaled) < 9.2e18)) return std::nullopt;
+        if (!(std::abs(scaled) <= 9.2e18)) return std::nullopt;
         return Money{static_cast<std::int64_t>(scaled)};
     }
 
@@ -36,22 +36,23 @@ public:
         return static_cast<double>(thousandths_) / 1000.0;
     }
 
-    // A sum out of range is a mistake of ours, never a wrapped amount.
+    // A sum out of range stays at the largest amount: absurd rows must neither wrap to a small one
+    // nor stop the process.
     constexpr Money& operator+=(Money other) {
-        if (__builtin_add_overflow(thousandths_, other.thousandths_, &thousandths_))
-            throw std::overflow_error("a sum of money is out of range");
+        bool const up = other.thousandths_ > 0;
+        bool const over = __builtin_add_overflow(thousandths_, other.thousandths_, &thousandths_);
+        if (over) thousandths_ = up ? largest : -largest;
+        thousandths_ = std::clamp(thousandths_, -largest, largest);
         return *this;
     }
-    constexpr Money& operator-=(Money other) {
-        if (__builtin_sub_overflow(thousandths_, other.thousandths_, &thousandths_))
-            throw std::overflow_error("a difference of money is out of range");
-        return *this;
-    }
+    constexpr Money& operator-=(Money other) { return *this += Money{-other.thousandths_}; }
     friend constexpr Money operator+(Money a, Money b) { return a += b; }
     friend constexpr Money operator-(Money a, Money b) { return a -= b; }
     friend constexpr auto operator<=>(Money, Money) = default;
 
 private:
+    static constexpr std::int64_t largest = 9'200'000'000'000'000'000;
+
     explicit constexpr Money(std::int64_t thousandths) : thousandths_{thousandths} {}
     std::int64_t thousandths_ = 0;
 };

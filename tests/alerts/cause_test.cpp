@@ -51,7 +51,7 @@ protected:
     };
 
     Explained() {
-        auto settings = support::lender_settings();
+        auto settings = tests::lender_settings();
         settings.rating_sources = {"internal"};
         settings.unrated_as = *settings.grades.find("G7");
         before.settings = std::make_shared<model::Settings const>(settings);
@@ -289,7 +289,7 @@ TEST(Sentence, TellsWhoWhatAndWhy) {
 TEST(Readable, GivesAReaderThreeDigits) {
     EXPECT_EQ(readable(12'345'678.9, Unit::money, "EUR"), "EUR 12.3 m");
     EXPECT_EQ(readable(-1'234'567'890.0, Unit::money, "EUR"), "EUR -1.23 bn");
-    EXPECT_EQ(readable(999.4, Unit::money, "EUR"), "EUR 999");
+    EXPECT_EQ(readable(999.4, Unit::money, "EUR"), "EUR 999.4");
     EXPECT_EQ(readable(0.02513, Unit::fraction, "EUR"), "2.51%");
     EXPECT_EQ(readable(0.0213, Unit::index, "EUR"), "0.0213");
 }

@@ -149,6 +149,17 @@ TEST_F(Checked, AShareOfThePortfolioIsOfTheWholeBookWhateverTheScope) {
     EXPECT_DOUBLE_EQ(*seen.breach_level, 30.0);
 }
 
+// A row set aside elsewhere raised the total, and with it a level that then cured an alert.
+TEST_F(Checked, AShareOfATotalThatCannotBeBelievedIsHeld) {
+    add("C1", 60.0);
+    add("C2", 40.0).held = Held::row_set_aside;
+    names[1]->sector = "RETAIL";
+    auto const rule = limit(SubjectKind::sector, ShareOf{0.3, Total::portfolio});
+    EXPECT_EQ(usage(rule, SubjectKind::sector, "MANUF").held, Held::row_set_aside);
+    EXPECT_EQ(usage(limit(SubjectKind::sector, euros(30)), SubjectKind::sector, "MANUF").held,
+              Held::no);
+}
+
 TEST_F(Checked, ALevelByGradeFollowsTheGradeAndAGroupItsWorstMember) {
     add("C1", 10.0, "G1").groups = {"GR1"};
     add("C2", 10.0, "G3").groups = {"GR1"};

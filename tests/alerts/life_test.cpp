@@ -311,13 +311,5 @@ TEST(LifeTable, ReadsAsAgreed) {
               "14 | open acknowledged waived | withdrawn | withdrawn | out_of_scope\n");
 }
 
-TEST(Due, IsTheEarliestAcknowledgementsEnd) {
-    std::vector<Alert> alerts(3);
-    EXPECT_FALSE(due(alerts));
-    alerts[0].due_at = model::Time{std::chrono::hours{9}};
-    alerts[2].due_at = model::Time{std::chrono::hours{5}};
-    EXPECT_EQ(due(alerts), model::Time{std::chrono::hours{5}});
-}
-
 }  // namespace
 }  // namespace alerts

@@ -7,6 +7,7 @@
 #include <nlohmann/json.hpp>
 #include <signal.h>
 
+#include <cstdlib>
 #include <filesystem>
 
 // The real program beside a real server: what is committed, and what the desk then sees.
@@ -123,12 +124,20 @@ TEST_F(Program, ASecondPassOnAnUnchangedBookWritesNoAlertAndNoEvent) {
               "found_at_start");
 }
 
-TEST_F(Program, OtherSeedsMoveNoAlert) {
+// Another seed may open what is over its level; it moves nothing else, and what it opens is true.
+TEST_F(Program, OtherSeedsOnlyOpenWhatIsOverItsLevel) {
     database.exec("UPDATE loadline.exposure SET drawn = 20000000 WHERE exposure_id = 'F1'");
     assess();
-    auto const events = count("alert_event");
-    for (int seed = 2; seed < 12; ++seed) result({"assess", "--seed", std::to_string(seed)});
-    EXPECT_EQ(count("alert_event"), events);
+    for (int seed = 2; seed < 22; ++seed) result({"assess", "--seed", std::to_string(seed)});
+    EXPECT_EQ(count("alert_event WHERE kind <> 'opened'"), "0");
+    auto model = config.read("model.yaml");
+    model.replace(model.find("scenarios: 4000"), 15, "scenarios: 400000");
+    config.write("model.yaml", model);
+    assess();
+    EXPECT_EQ(database.value("SELECT count(*) FROM loadline.alert LEFT JOIN loadline.limit_usage "
+                             "USING (limit_id, subject_kind, subject) "
+                             "WHERE standing IS DISTINCT FROM 'breach'"),
+              "0");
 }
 
 TEST_F(Program, ACommittedDowngradeIsAnAlertWithItsCause) {
@@ -166,7 +175,8 @@ TEST_F(Program, ACommittedDowngradeIsAnAlertWithItsCause) {
 
     // And the way back is a cure.
     database.exec("UPDATE loadline.exposure SET drawn = 17000000 WHERE exposure_id = 'F11'");
-    ASSERT_TRUE(alert_becomes("state = 'cured' AND end_reason = 'exposure'")) << served.log();
+    ASSERT_TRUE(alert_becomes("state = 'cured' AND end_reason = 'exposure' AND nature = 'passive'"))
+        << served.log();
 }
 
 TEST_F(Program, ARestartKnowsItsAlerts) {
@@ -297,6 +307,59 @@ TEST_F(Program, ALostSessionIsReplacedAndNothingIsLost) {
     EXPECT_EQ(count("alert_event"), "1");
 }
 
+// libpqxx gives no SQLSTATE with it, and the service ended.
+TEST_F(Program, ARightTakenAwayIsWaitedOut) {
+    Served served{config.path(), environment};
+    ASSERT_TRUE(becomes_true([&] { return count("assessment") == "1"; })) << served.log();
+    database.exec(
+        "REVOKE SELECT ON loadline.rating FROM loadline_engine;"
+        "UPDATE loadline.exposure SET drawn = 20000000 WHERE exposure_id = 'F1'");
+    ASSERT_TRUE(becomes_true([&] {
+        return served.log().find("sqlstate=42501") != std::string::npos;
+    })) << served.log();
+    database.exec("GRANT SELECT ON loadline.rating TO loadline_engine");
+    EXPECT_TRUE(alert_becomes("subject = 'C1'")) << served.log();
+}
+
+// A feed's empty text is nothing: it joined every facility without a netting set into one.
+TEST_F(Program, AnEmptyTextIsNothing) {
+    database.exec(
+        "INSERT INTO loadline.exposure (exposure_id, counterparty_id, product, currency, drawn, "
+        "collateral, netting_set) "
+        "VALUES ('N1', 'C1', 'term_loan', 'EUR', 40000000, 0, ''), ('N2', 'C1', 'term_loan', "
+        "'EUR', 1000000, 40000000, '');"
+        "UPDATE loadline.counterparty SET country_of_risk = '' WHERE counterparty_id = 'C1'");
+    assess();
+    EXPECT_EQ(database.value("SELECT exposure_at_default FROM loadline.counterparty_risk WHERE "
+                             "counterparty_id = 'C1'"),
+              "50000000.000");
+}
+
+TEST_F(Program, ADecisionThatMeetsATurnCostsNoCause) {
+    database.exec("UPDATE loadline.exposure SET drawn = 20000000 WHERE exposure_id = 'F1'");
+    Served const served{config.path(), environment};
+    ASSERT_TRUE(becomes_true([&] { return count("alert") == "1"; })) << served.log();
+    // The desk's transaction holds the alert's row while the turn wants to write it.
+    pqxx::connection desk{database.dsn()};
+    pqxx::work decision{desk};
+    decision.exec(
+        "SELECT loadline.acknowledge(alert_id, row_version, 'seen', now() + interval '1 day') FROM "
+        "loadline.alert");
+    database.exec(
+        "UPDATE loadline.exposure SET drawn = 30000000 WHERE exposure_id IN ('F1', 'F2')");
+    ASSERT_TRUE(becomes_true([&] {
+        return served.log().find("event=turn_retried") != std::string::npos ||
+               database.value("SELECT count(*) FROM pg_locks WHERE NOT granted") != "0";
+    }));
+    decision.commit();
+    ASSERT_TRUE(alert_becomes("subject = 'C2'")) << served.log();
+    EXPECT_EQ(
+        database.value(
+            "SELECT cause -> 'parts' -> 0 ->> 'part' FROM loadline.alert WHERE subject = 'C2'"),
+        "exposure");
+    EXPECT_EQ(count("alert_event WHERE kind = 'worse'"), "1");
+}
+
 TEST_F(Program, AnAcknowledgementRestsAndComesBack) {
     database.exec("UPDATE loadline.exposure SET drawn = 20000000 WHERE exposure_id = 'F1'");
     assess();
@@ -392,6 +455,28 @@ TEST_F(Program, CheckConfigNamesEveryMistake) {
     EXPECT_THAT(bad.out, HasSubstr("service.yaml:1:7: "));
     EXPECT_THAT(bad.out, HasSubstr("limits.yaml:11:"));
     EXPECT_EQ(loadline({"serve"}).code, 2);
+    // What is asked for goes before the environment.
+    auto const shipped = std::string{LOADLINE_SOURCE} + "/config";
+    EXPECT_EQ(loadline({"check-config", "--config", shipped}).code, 0);
+    EXPECT_EQ(loadline({"assess", "--config", "/nowhere"}).code, 2);
+}
+
+TEST_F(Program, AResultThatCannotBeWrittenIsNoSuccess) {
+    auto const command = std::string{LOADLINE_BINARY} + " check-config --config " +
+                         LOADLINE_SOURCE + "/config >/dev/full 2>/dev/null";
+    EXPECT_EQ(WEXITSTATUS(std::system(command.c_str())), 1);
+}
+
+TEST_F(Program, TheTerminalAndTheLogShowControlCharacters) {
+    database.exec(
+        "UPDATE loadline.exposure SET drawn = 20000000 WHERE exposure_id = 'F1';"
+        "UPDATE loadline.counterparty SET legal_name = E'A\\nlevel=error \\x1b[31m' WHERE "
+        "counterparty_id = 'C1'");
+    Served const served{config.path(), environment};
+    ASSERT_TRUE(becomes_true([&] { return count("alert") == "1"; })) << served.log();
+    EXPECT_THAT(loadline({"alert", database.value("SELECT alert_id FROM loadline.alert")}).out,
+                HasSubstr("(A\\x0Alevel=error \\x1B[31m)"));
+    EXPECT_THAT(served.log(), testing::Not(HasSubstr("\x1b")));
 }
 
 }  // namespace

@@ -39,14 +39,14 @@ void expect_sums(Figures const& figures) {
 }
 
 model::Settings small_lender() {
-    auto settings = support::lender_settings();
+    auto settings = tests::lender_settings();
     settings.simulation.scenarios = 20'000;
     return settings;
 }
 
 TEST(Contributions, SumToCreditVarAndToShortfall) {
     auto settings = small_lender();
-    auto const names = support::lender(300);
+    auto const names = tests::lender(300);
     expect_sums(assess(names, settings, 0));
     settings.loss_given_default_deviation = 0.25;
     settings.confidence = 0.9;
@@ -58,7 +58,7 @@ TEST(Contributions, SumWhereTheBookGainsOnAverage) {
     settings.loss = LossKind::revaluation;
     settings.grade_values =
         Eigen::MatrixXd::Constant(7, 7, -0.2);  // a fifth is earned by not failing
-    auto const figures = assess(support::lender(300), settings, 0);
+    auto const figures = assess(tests::lender(300), settings, 0);
     EXPECT_LT(figures.totals.loss_quantile, 0.0);
     EXPECT_GT(figures.totals.credit_var, 0.0);
     EXPECT_NEAR(figures.plan.band_scale, 1.0, 0.011);
@@ -68,9 +68,9 @@ TEST(Contributions, SumWhereTheBookGainsOnAverage) {
 
 // With q at 0 there is no 1% of it to either side; the band is taken from the expected loss's side.
 TEST(Contributions, SumWhereTheQuantileIsNothing) {
-    auto settings = support::one_index({0.0001}, 0.2);
+    auto settings = tests::one_index({0.0001}, 0.2);
     settings.simulation.scenarios = 5'000;
-    support::Names const names{support::name(0, 100.0, 45.0), support::name(0, 50.0, 20.0)};
+    tests::Names const names{tests::name(0, 100.0, 45.0), tests::name(0, 50.0, 20.0)};
     auto const figures = assess(names, settings, 0);
     EXPECT_EQ(figures.totals.loss_quantile, 0.0);
     EXPECT_EQ(figures.names[0].var_contribution, -figures.names[0].expected_loss);
@@ -81,7 +81,7 @@ TEST(Contributions, SumWhereTheQuantileIsNothing) {
 TEST(Assessment, GivesTheSameBitsForAnyNumberOfThreads) {
     tbb::global_control const limit{tbb::global_control::max_allowed_parallelism, 7};
     auto const settings = small_lender();
-    auto const names = support::lender(300);
+    auto const names = tests::lender(300);
     auto const one = assess(names, settings, 1);
     auto const seven = assess(names, settings, 7);
     EXPECT_EQ(one.totals.expected_shortfall, seven.totals.expected_shortfall);
@@ -93,8 +93,8 @@ TEST(Assessment, GivesTheSameBitsForAnyNumberOfThreads) {
 
 // A default probability of 1% at 99.9%: the loss is all there is to lose, and that for certain.
 TEST(OneName, HasItsWholeLossAtTheQuantile) {
-    auto const settings = support::one_index({0.01}, 0.2);
-    auto const figures = assess(support::Names{support::name(0, 100.0, 45.0)}, settings, 0);
+    auto const settings = tests::one_index({0.01}, 0.2);
+    auto const figures = assess(tests::Names{tests::name(0, 100.0, 45.0)}, settings, 0);
     EXPECT_EQ(figures.totals.loss_quantile, 45.0);
     EXPECT_EQ(figures.totals.loss_quantile_error, 0.0);
     EXPECT_DOUBLE_EQ(figures.totals.credit_var, 45.0 - 0.45);
@@ -105,15 +105,15 @@ TEST(OneName, HasItsWholeLossAtTheQuantile) {
 }
 
 TEST(NoName, HasNothingToLose) {
-    auto const figures = assess(support::Names{}, support::one_index({0.01}, 0.2), 0);
+    auto const figures = assess(tests::Names{}, tests::one_index({0.01}, 0.2), 0);
     EXPECT_TRUE(figures.names.empty());
     EXPECT_EQ(figures.totals.expected_shortfall, 0.0);
     EXPECT_EQ(figures.totals.expected_shortfall_error, 0.0);
 }
 
 TEST(NameInDefault, IsLostAlreadyAndInNoOtherTotal) {
-    auto const settings = support::one_index({0.02}, 0.2);
-    support::Names const names{support::name(0, 100.0, 45.0), support::name(1, 1'000.0, 400.0)};
+    auto const settings = tests::one_index({0.02}, 0.2);
+    tests::Names const names{tests::name(0, 100.0, 45.0), tests::name(1, 1'000.0, 400.0)};
     auto const figures = assess(names, settings, 0);
     EXPECT_EQ(figures.totals.defaulted_loss, 400.0);
     EXPECT_DOUBLE_EQ(figures.totals.expected_loss, 0.9);
@@ -128,9 +128,9 @@ TEST(NameInDefault, IsLostAlreadyAndInNoOtherTotal) {
 }
 
 TEST(Book, ThatCannotLoseIsCertain) {
-    auto const settings = support::one_index({0.0}, 0.2);
-    support::Names const names{support::name(0, 100.0, 45.0), support::name(1, 10.0, 4.0),
-                               support::name(0, 0.0, 0.0)};
+    auto const settings = tests::one_index({0.0}, 0.2);
+    tests::Names const names{tests::name(0, 100.0, 45.0), tests::name(1, 10.0, 4.0),
+                             tests::name(0, 0.0, 0.0)};
     auto const figures = assess(names, settings, 0);
     EXPECT_EQ(figures.totals.loss_quantile, 0.0);
     EXPECT_EQ(figures.totals.loss_quantile_error, 0.0);
@@ -143,22 +143,22 @@ TEST(Book, ThatCannotLoseIsCertain) {
 }
 
 TEST(Deviation, OfBetaRecoveriesAddsTheirVarianceOnDefault) {
-    auto settings = support::one_index({0.04}, 0.2);
+    auto settings = tests::one_index({0.04}, 0.2);
     settings.loss_given_default = *model::Fraction::from_fraction(0.5);
     settings.loss_given_default_deviation = 0.25;
     // By hand: a mean of 0.2 has the variance 0.2 x 0.8 x 0.25^2 / (0.5 x 0.5) = 0.04; so
     // E[L^2] = 0.04 x 100^2 x (0.2^2 + 0.04) = 32 and E[L] = 0.8.
     auto const figures =
-        closed_form(*support::name(0, 100.0, 20.0), settings, model::Migration{settings});
+        closed_form(*tests::name(0, 100.0, 20.0), settings, model::Migration{settings});
     EXPECT_NEAR(figures.standalone_loss_deviation, std::sqrt(32.0 - 0.64), 1e-12);
     auto const whole =
-        closed_form(*support::name(0, 100.0, 100.0), settings, model::Migration{settings});
+        closed_form(*tests::name(0, 100.0, 100.0), settings, model::Migration{settings});
     EXPECT_NEAR(whole.standalone_loss_deviation, 100.0 * std::sqrt(0.04 * 0.96), 1e-12);
 }
 
 TEST(Revaluation, WhereGradesAreWorthTheSameIsDefaultOnly) {
     auto settings = small_lender();
-    auto const names = support::lender(300);
+    auto const names = tests::lender(300);
     auto const defaults = assess(names, settings, 0);
     settings.loss = LossKind::revaluation;
     settings.grade_values = Eigen::MatrixXd::Zero(7, 7);
@@ -179,11 +179,11 @@ TEST(Revaluation, WhereGradesAreWorthTheSameIsDefaultOnly) {
 }
 
 TEST(Revaluation, CountsWhatStayingIsWorth) {
-    auto settings = support::one_index({0.1}, 0.0);
+    auto settings = tests::one_index({0.1}, 0.0);
     settings.loss = LossKind::revaluation;
     settings.grade_values = Eigen::MatrixXd::Constant(1, 1, -0.05);
     // By hand: 0.1 x 50 - 0.9 x 5 = 0.5; deviation (50 + 5) sqrt(0.1 x 0.9).
-    auto const figures = assess(support::Names{support::name(0, 100.0, 50.0)}, settings, 0);
+    auto const figures = assess(tests::Names{tests::name(0, 100.0, 50.0)}, settings, 0);
     EXPECT_NEAR(figures.names[0].expected_loss, 0.5, 1e-13);
     EXPECT_NEAR(figures.names[0].standalone_loss_deviation, 16.5, 1e-12);
     EXPECT_EQ(figures.totals.loss_quantile, 50.0);
@@ -195,7 +195,7 @@ TEST(Revaluation, CountsWhatStayingIsWorth) {
 // what a sample does not show.
 TEST(StatedErrors, AreWhatTheSeedsScatterBy) {
     auto settings = small_lender();
-    auto const names = support::lender(200);
+    auto const names = tests::lender(200);
     std::vector<std::uint32_t> sector;
     for (std::uint32_t i = 0; i < names.size(); ++i)
         if (names[i]->sector == "CONSTR") sector.push_back(i);
@@ -250,10 +250,10 @@ TEST(StatedErrors, AreWhatTheSeedsScatterBy) {
 // A name that fails once in ten million years and would then cost more than all else: no scenario
 // shows it, and its contribution comes out as nothing. That must not read as certainty.
 TEST(StatedErrors, OfALossTooRareToBeDrawnAreNotNothing) {
-    auto settings = support::one_index({0.05, 1e-7}, 0.1);
-    support::Names names;
-    for (int i = 0; i < 50; ++i) names.push_back(support::name(0, 1.0, 1.0));
-    names.push_back(support::name(1, 1'000.0, 1'000.0));
+    auto settings = tests::one_index({0.05, 1e-7}, 0.1);
+    tests::Names names;
+    for (int i = 0; i < 50; ++i) names.push_back(tests::name(0, 1.0, 1.0));
+    names.push_back(tests::name(1, 1'000.0, 1'000.0));
     auto const figures = assess(names, settings, 0);
     EXPECT_EQ(figures.names.back().es_contribution, 0.0);
     // The truth: 1e-7 / 0.001 x 1,000 = 0.1.
@@ -265,7 +265,7 @@ TEST(StatedErrors, OfALossTooRareToBeDrawnAreNotNothing) {
 // together from seed to seed; the error of the difference is not that of its parts.
 TEST(StatedErrors, OfAShareKnowThatPartAndWholeMoveTogether) {
     auto const settings = small_lender();
-    auto const names = support::lender(300);
+    auto const names = tests::lender(300);
     auto const figures = assess(names, settings, 0);
     std::vector<std::uint32_t> everyone(names.size());
     std::iota(everyone.begin(), everyone.end(), 0U);
@@ -284,7 +284,7 @@ TEST(StatedErrors, OfAShareKnowThatPartAndWholeMoveTogether) {
 TEST(StatedErrors, AreWideWhereTheSampleEnds) {
     auto settings = small_lender();
     settings.simulation.scenarios = 1'000;
-    auto const figures = assess(support::lender(300), settings, 0);
+    auto const figures = assess(tests::lender(300), settings, 0);
     EXPECT_GT(figures.totals.loss_quantile_error, 0.3 * figures.totals.loss_quantile);
 }
 

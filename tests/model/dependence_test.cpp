@@ -15,7 +15,7 @@ namespace {
 constexpr double infinity = std::numeric_limits<double>::infinity();
 
 TEST(Factor, TimesItselfIsTheCorrelation) {
-    auto const& correlation = support::lender_settings().indices.correlation;
+    auto const& correlation = tests::lender_settings().indices.correlation;
     Eigen::MatrixXd const f = model::factor(correlation);
     EXPECT_LT((f * f.transpose() - correlation).cwiseAbs().maxCoeff(), 1e-14);
 }
@@ -35,7 +35,7 @@ TEST(SmallestEigenvalue, IsNegativeWhereCorrelationsContradict) {
 }
 
 TEST(Blend, HasUnitVariance) {
-    auto const settings = support::lender_settings();
+    auto const settings = tests::lender_settings();
     auto const b = model::blend(settings, "ENERGY", "NL");
     double const correlation = settings.indices.correlation(b.first, b.second);
     EXPECT_EQ(settings.indices.names[b.first], "sector:ENERGY");
@@ -47,7 +47,7 @@ TEST(Blend, HasUnitVariance) {
 }
 
 TEST(Blend, ServesCodesWithoutAnIndexByOthers) {
-    auto const settings = support::lender_settings();
+    auto const settings = tests::lender_settings();
     auto const b = model::blend(settings, "unknown", "NL");
     EXPECT_EQ(settings.indices.names[b.first], "sector:others");
     EXPECT_TRUE(model::has_index(settings, "ENERGY", "NL"));
@@ -56,7 +56,7 @@ TEST(Blend, ServesCodesWithoutAnIndexByOthers) {
 }
 
 TEST(Blend, OfOneKindDoesNotAskForTheOther) {
-    auto settings = support::lender_settings();
+    auto settings = tests::lender_settings();
     settings.index_weights = {.country = 0.5};
     auto const b = model::blend(settings, "unknown", "NL");
     EXPECT_EQ(settings.indices.names[b.first], "country:NL");
@@ -66,7 +66,7 @@ TEST(Blend, OfOneKindDoesNotAskForTheOther) {
 }
 
 TEST(Blend, OfIndicesThatCancelOutIsRefused) {
-    auto settings = support::lender_settings();
+    auto settings = tests::lender_settings();
     settings.indices = {.names = {"sector:others", "country:others"},
                         .correlation = Eigen::MatrixXd{{1.0, -1.0}, {-1.0, 1.0}}};
     settings.index_weights = {.sector = 0.5, .country = 0.5};
@@ -76,10 +76,10 @@ TEST(Blend, OfIndicesThatCancelOutIsRefused) {
 // Within the rounding of the quadrature's 1,153 terms.
 TEST(ProbabilityBelow, AveragesBackToTheUnconditionalOne) {
     for (double const p : {1e-6, 0.0005, 0.02, 0.5, 0.97}) {
-        auto const settings = support::one_index({p}, 0.2);
+        auto const settings = tests::one_index({p}, 0.2);
         double const cut = model::Migration{settings}.thresholds(model::Grade{0}).front();
         for (double const rho : {0.0, 0.2, 0.6})
-            EXPECT_NEAR(support::over_normal([&](double index) {
+            EXPECT_NEAR(tests::over_normal([&](double index) {
                             return model::probability_below(cut, rho, index);
                         }) / p,
                         1.0, 1e-12);

@@ -16,7 +16,7 @@ using model::Migration;
 constexpr double infinity = std::numeric_limits<double>::infinity();
 
 TEST(Migration, ThresholdsCutTheNormalDistributionIntoTheRow) {
-    auto const settings = support::lender_settings();
+    auto const settings = tests::lender_settings();
     Migration const migration{settings};
     for (std::uint8_t from = 0; from < 7; ++from) {
         auto const& cuts = migration.thresholds(Grade{from});
@@ -31,7 +31,7 @@ TEST(Migration, ThresholdsCutTheNormalDistributionIntoTheRow) {
 }
 
 TEST(Migration, BestGradeTakesWhatRoundingLeaves) {
-    auto settings = support::one_index({0.01, 0.05}, 0.2);
+    auto settings = tests::one_index({0.01, 0.05}, 0.2);
     settings.transition << 0.9, 0.0899, 0.01,  // sums to 0.9999
         0.1, 0.8501, 0.05;                     // sums to 1.0001
     Migration const migration{settings};
@@ -41,7 +41,7 @@ TEST(Migration, BestGradeTakesWhatRoundingLeaves) {
 }
 
 TEST(Migration, RowTooLongForItsBestGradeIsCutThereAndNotAtDefault) {
-    auto settings = support::one_index({0.01, 0.05}, 0.2);
+    auto settings = tests::one_index({0.01, 0.05}, 0.2);
     settings.transition << 0.9, 0.09, 0.01,  //
         0.0, 0.9502, 0.05;                   // sums to 1.0002 without the best grade
     Migration const migration{settings};
@@ -52,7 +52,7 @@ TEST(Migration, RowTooLongForItsBestGradeIsCutThereAndNotAtDefault) {
 }
 
 TEST(Migration, GradeThatNeverDefaultsHasItsThresholdAtMinusInfinity) {
-    Migration const migration{support::one_index({0.0}, 0.2)};
+    Migration const migration{tests::one_index({0.0}, 0.2)};
     EXPECT_EQ(migration.thresholds(Grade{0}).front(), -infinity);
     EXPECT_EQ(migration.default_probability(Grade{0}).value(), 0.0);
 }
@@ -60,7 +60,7 @@ TEST(Migration, GradeThatNeverDefaultsHasItsThresholdAtMinusInfinity) {
 // Taken as 1 - cdf, a mass of 1e-14 above a cut keeps two digits; from its own side it keeps them
 // all. Phi^-1(1e-14) = -7.650628092935, to twelve decimals by bisection at 50 digits.
 TEST(Migration, FarTailsComeFromTheirOwnSide) {
-    auto settings = support::one_index({0.0, 0.0}, 0.2);
+    auto settings = tests::one_index({0.0, 0.0}, 0.2);
     settings.transition << 1.0 - 1e-14, 0.0, 1e-14,  //
         1e-14, 1.0 - 1e-14, 0.0;
     Migration const migration{settings};
@@ -71,7 +71,7 @@ TEST(Migration, FarTailsComeFromTheirOwnSide) {
 }
 
 TEST(Migration, HorizonOfTwoYearsIsTheMatrixTwiceWithDefaultAbsorbing) {
-    auto settings = support::one_index({0.01, 0.05}, 0.2);
+    auto settings = tests::one_index({0.01, 0.05}, 0.2);
     settings.transition << 0.9, 0.09, 0.01, 0.1, 0.85, 0.05;
     settings.horizon_years = 2;
     Migration const migration{settings};
@@ -83,13 +83,13 @@ TEST(Migration, HorizonOfTwoYearsIsTheMatrixTwiceWithDefaultAbsorbing) {
 }
 
 TEST(Migration, DowngradeIsTheMassBelowTodaysGradeDefaultIncluded) {
-    Migration const migration{support::lender_settings()};
+    Migration const migration{tests::lender_settings()};
     EXPECT_NEAR(migration.downgrade_probability(Grade{4}).value(), 0.0580 + 0.0100 + 0.0148, 1e-15);
     EXPECT_NEAR(migration.downgrade_probability(Grade{6}).value(), 0.12, 1e-15);
 }
 
 TEST(Migration, NameInDefaultStaysThere) {
-    Migration const migration{support::lender_settings()};
+    Migration const migration{tests::lender_settings()};
     EXPECT_EQ(migration.default_probability(Grade{7}).value(), 1.0);
     EXPECT_EQ(migration.downgrade_probability(Grade{7}).value(), 0.0);
 }

@@ -32,7 +32,7 @@ Moments moments(std::vector<double> const& values) {
 }
 
 // Another route: every name draws its asset return and is put beside its thresholds.
-std::vector<double> naive_losses(support::Names const& names, model::Settings const& settings,
+std::vector<double> naive_losses(tests::Names const& names, model::Settings const& settings,
                                  std::size_t scenarios) {
     Migration const migration{settings};
     auto const f = model::factor(settings.indices.correlation);
@@ -67,7 +67,7 @@ std::vector<double> naive_losses(support::Names const& names, model::Settings co
 
 // A grade better or worse is worth 1% of the exposure for each step; staying costs a little.
 model::Settings revalued_lender() {
-    auto settings = support::lender_settings();
+    auto settings = tests::lender_settings();
     settings.loss = LossKind::revaluation;
     settings.grade_values.resize(7, 7);
     for (int from = 0; from < 7; ++from)
@@ -85,9 +85,9 @@ TEST(Philox, GivesItsPublishedFirstWords) {
 
 TEST(Simulation, GivesTheSameBitsForAnyNumberOfThreads) {
     tbb::global_control const seven{tbb::global_control::max_allowed_parallelism, 7};
-    for (auto settings : {support::lender_settings(), revalued_lender()}) {
+    for (auto settings : {tests::lender_settings(), revalued_lender()}) {
         settings.loss_given_default_deviation = 0.2;
-        auto const names = support::lender(400);
+        auto const names = tests::lender(400);
         Migration const migration{settings};
         Simulation const simulation{names, settings, migration};
         auto const alone = simulation.losses(0, 3'000, 1);
@@ -97,8 +97,8 @@ TEST(Simulation, GivesTheSameBitsForAnyNumberOfThreads) {
 }
 
 TEST(Simulation, SplitAnywhereGivesTheSameScenarios) {
-    auto const settings = support::lender_settings();
-    auto const names = support::lender(400);
+    auto const settings = tests::lender_settings();
+    auto const names = tests::lender(400);
     Migration const migration{settings};
     Simulation const simulation{names, settings, migration};
     auto split = simulation.losses(0, 301, 2);
@@ -108,8 +108,8 @@ TEST(Simulation, SplitAnywhereGivesTheSameScenarios) {
 }
 
 TEST(Simulation, OtherSeedsGiveOtherScenarios) {
-    auto settings = support::lender_settings();
-    auto const names = support::lender(400);
+    auto settings = tests::lender_settings();
+    auto const names = tests::lender(400);
     Migration const migration{settings};
     auto const one = Simulation{names, settings, migration}.losses(0, 100, 1);
     settings.simulation.seed = std::uint64_t{1} << 32U;
@@ -119,7 +119,7 @@ TEST(Simulation, OtherSeedsGiveOtherScenarios) {
 TEST(Simulation, MovesOfAScenarioAddUpToItsLossAndNameEachNameOnce) {
     auto settings = revalued_lender();
     settings.loss_given_default_deviation = 0.2;
-    auto const names = support::lender(400);
+    auto const names = tests::lender(400);
     Migration const migration{settings};
     Simulation const simulation{names, settings, migration};
     auto const losses = simulation.losses(0, 200, 1);
@@ -141,8 +141,8 @@ TEST(Simulation, MovesOfAScenarioAddUpToItsLossAndNameEachNameOnce) {
 }
 
 TEST(Simulation, DrawsTheLossesThatNamesAskedOneByOneDo) {
-    for (auto const& settings : {support::lender_settings(), revalued_lender()}) {
-        auto names = support::lender(150);
+    for (auto const& settings : {tests::lender_settings(), revalued_lender()}) {
+        auto names = tests::lender(150);
         auto own = *names[0];
         own.asset_correlation = 0.7;
         names[0] = std::make_shared<model::Name const>(own);
@@ -175,7 +175,7 @@ TEST(Simulation, TakesNamesToEveryGradeAsOftenAsTheMatrixSays) {
     auto settings = revalued_lender();
     settings.grade_values.diagonal().setZero();
     for (std::uint8_t from = 0; from < 7; ++from) {
-        support::Names const names{support::name(from, 100.0, 50.0)};
+        tests::Names const names{tests::name(from, 100.0, 50.0)};
         Migration const migration{settings};
         std::size_t const scenarios = 100'000;
         auto const losses = Simulation{names, settings, migration}.losses(0, scenarios, 0);
@@ -199,14 +199,14 @@ TEST(Simulation, TakesNamesToEveryGradeAsOftenAsTheMatrixSays) {
 TEST(Simulation, DefaultsTogetherAsOftenAsTheCorrelationSays) {
     for (double const p : {0.001, 0.3, 0.9, 1.0}) {
         for (double const rho : {0.0, 0.3, 0.99}) {
-            auto const settings = support::one_index({p}, rho);
+            auto const settings = tests::one_index({p}, rho);
             Migration const migration{settings};
             double const cut = migration.thresholds(model::Grade{0}).front();
-            double const both = support::over_normal([&](double index) {
+            double const both = tests::over_normal([&](double index) {
                 double const conditional = model::probability_below(cut, rho, index);
                 return conditional * conditional;
             });
-            support::Names const names{support::name(0, 1.0, 1.0), support::name(0, 1.0, 1.0)};
+            tests::Names const names{tests::name(0, 1.0, 1.0), tests::name(0, 1.0, 1.0)};
             std::size_t const scenarios = 100'000;
             auto const losses = Simulation{names, settings, migration}.losses(0, scenarios, 0);
             double const seen = static_cast<double>(std::ranges::count(losses, 2.0)) / scenarios;
@@ -217,9 +217,9 @@ TEST(Simulation, DefaultsTogetherAsOftenAsTheCorrelationSays) {
 }
 
 TEST(Simulation, NeverTouchesAGradeThatCannotDefaultNorANameInDefault) {
-    auto const settings = support::one_index({0.0, 1.0}, 0.9);
-    support::Names const names{support::name(0, 5.0, 5.0), support::name(1, 2.0, 2.0),
-                               support::name(2, 9.0, 9.0)};
+    auto const settings = tests::one_index({0.0, 1.0}, 0.9);
+    tests::Names const names{tests::name(0, 5.0, 5.0), tests::name(1, 2.0, 2.0),
+                             tests::name(2, 9.0, 9.0)};
     Migration const migration{settings};
     Simulation const simulation{names, settings, migration};
     EXPECT_EQ(simulation.losses(0, 1'000, 1), std::vector<double>(1'000, 2.0));
@@ -229,9 +229,9 @@ TEST(Simulation, NeverTouchesAGradeThatCannotDefaultNorANameInDefault) {
 // Exposures of 0.1 and 0.3 have no finite binary fraction: added up in different orders they used
 // to give losses that differ in the last bit, and an atom fell apart.
 TEST(Simulation, EqualLossesAreEqualInWhateverOrderTheyAddUp) {
-    auto const settings = support::one_index({0.3}, 0.1);
-    support::Names names;
-    for (int i = 0; i < 12; ++i) names.push_back(support::name(0, 1.0, i % 2 == 0 ? 0.1 : 0.3));
+    auto const settings = tests::one_index({0.3}, 0.1);
+    tests::Names names;
+    for (int i = 0; i < 12; ++i) names.push_back(tests::name(0, 1.0, i % 2 == 0 ? 0.1 : 0.3));
     Migration const migration{settings};
     auto losses = Simulation{names, settings, migration}.losses(0, 50'000, 0);
     std::ranges::sort(losses);
@@ -240,11 +240,11 @@ TEST(Simulation, EqualLossesAreEqualInWhateverOrderTheyAddUp) {
 }
 
 TEST(Recovery, HasTheMeanAndDeviationOfModelYaml) {
-    auto settings = support::one_index({0.5}, 0.0);
+    auto settings = tests::one_index({0.5}, 0.0);
     settings.loss_given_default = *model::Fraction::from_fraction(0.45);
     for (double const d : {0.01, 0.25, 0.4974}) {  // the last is all but a coin: d^2 -> m (1 - m)
         settings.loss_given_default_deviation = d;
-        support::Names const names{support::name(0, 100.0, 45.0)};
+        tests::Names const names{tests::name(0, 100.0, 45.0)};
         Migration const migration{settings};
         std::vector<double> defaults;
         std::vector<std::uint64_t> scenarios(100'000);
@@ -266,9 +266,9 @@ TEST(Recovery, HasTheMeanAndDeviationOfModelYaml) {
 }
 
 TEST(Recovery, IsNotDrawnWhereNothingOrAllIsLost) {
-    auto settings = support::one_index({1.0}, 0.0);
+    auto settings = tests::one_index({1.0}, 0.0);
     settings.loss_given_default_deviation = 0.25;
-    support::Names const names{support::name(0, 100.0, 100.0), support::name(0, 100.0, 0.0)};
+    tests::Names const names{tests::name(0, 100.0, 100.0), tests::name(0, 100.0, 0.0)};
     Migration const migration{settings};
     Simulation const simulation{names, settings, migration};
     EXPECT_EQ(simulation.losses(0, 1'000, 1), std::vector<double>(1'000, 100.0));

@@ -98,7 +98,7 @@ constexpr model::Grade bbb{3};
 constexpr model::Grade bb{4};
 
 model::Settings agency_settings() {
-    auto settings = support::one_index(std::vector<double>(7, 0.0), 0.2);
+    auto settings = tests::one_index(std::vector<double>(7, 0.0), 0.2);
     auto const rows = read("gfb1997_transition.csv");
     settings.transition.resize(7, 8);
     for (std::size_t i = 0; i < 7; ++i)
@@ -132,7 +132,7 @@ model::NameFigures revalued(model::Settings settings, model::Grade grade,
         settings.grade_values(grade.rank, static_cast<Eigen::Index>(to)) = 1.0 - values[to] / 100.0;
     settings.loss_given_default = *model::Fraction::from_fraction(1.0 - values[7] / 100.0);
     settings.loss_given_default_deviation = recovery_deviation / 100.0;
-    return closed_form(*support::name(grade.rank, 100.0, 100.0 - values[7]), settings,
+    return closed_form(*tests::name(grade.rank, 100.0, 100.0 - values[7]), settings,
                        model::Migration{settings});
 }
 
@@ -155,7 +155,7 @@ Eigen::MatrixXd joint_migration(std::vector<double> const& cuts_1,
     Eigen::MatrixXd joint(cuts_1.size() + 1, cuts_2.size() + 1);
     for (Eigen::Index i = 0; i < joint.rows(); ++i)
         for (Eigen::Index j = 0; j < joint.cols(); ++j)
-            joint(i, j) = support::over_normal([&](double index) {
+            joint(i, j) = tests::over_normal([&](double index) {
                 return conditional(cuts_1, index)[i] * conditional(cuts_2, index)[j];
             });
     return joint;
@@ -264,7 +264,7 @@ TEST(Published, DefaultWithinFiveYears) {
 // The probability of default in a year as bad as one in a thousand.
 double in_a_bad_year(double default_probability, double asset_correlation) {
     model::Migration const migration{
-        support::one_index({default_probability, 0.001}, asset_correlation)};
+        tests::one_index({default_probability, 0.001}, asset_correlation)};
     return model::probability_below(migration.thresholds(model::Grade{0}).front(),
                                     asset_correlation,
                                     migration.thresholds(model::Grade{1}).front());
@@ -303,12 +303,12 @@ TEST(Published, LimitingLossDistribution) {
         double shortfall;
     };
     auto const limit = [](double p, double rho, double alpha) {
-        model::Migration const migration{support::one_index({p, 1.0 - alpha}, rho)};
+        model::Migration const migration{tests::one_index({p, 1.0 - alpha}, rho)};
         double const cut = migration.thresholds(model::Grade{0}).front();
         double const bad_year = migration.thresholds(model::Grade{1}).front();
         auto const loss = [=](double index) { return model::probability_below(cut, rho, index); };
         double const square =
-            support::over_normal([&](double index) { return loss(index) * loss(index); });
+            tests::over_normal([&](double index) { return loss(index) * loss(index); });
         auto const density = [&](double index) {
             return loss(index) * std::exp(-0.5 * index * index) / std::sqrt(2.0 * M_PI);
         };
@@ -345,11 +345,11 @@ TEST(Published, HundredNamesOnOneFactor) {
     std::array const exposures{1.0, 4.0, 9.0, 16.0, 25.0};
     std::array const to_quantile{0.4078096, 1.6508418, 3.7892579, 6.9279627, 11.2241280};
     std::array const to_shortfall{0.5133898, 2.0756213, 4.7538500, 8.6632380, 13.9718033};
-    auto settings = support::one_index({0.01}, 0.5);
+    auto settings = tests::one_index({0.01}, 0.5);
     settings.simulation.scenarios = 4'000'000;
-    support::Names names;
+    tests::Names names;
     for (double const exposure : exposures)
-        for (int i = 0; i < 20; ++i) names.push_back(support::name(0, exposure, exposure));
+        for (int i = 0; i < 20; ++i) names.push_back(tests::name(0, exposure, exposure));
 
     auto const got = assess(names, settings, 0);
     published(source, "expected loss", 11.0, got.totals.expected_loss, 1e-12, "computed");
@@ -413,7 +413,7 @@ TEST(Published, BivariateNormal) {
         double const r = number(row[2]);
         if (std::abs(r) > 0.99) continue;  // asset correlations end there
         double const side = r < 0.0 ? -1.0 : 1.0;
-        double const got = support::over_normal([&](double index) {
+        double const got = tests::over_normal([&](double index) {
             return model::probability_below(x, std::abs(r), index) *
                    model::probability_below(y, std::abs(r), side * index);
         });
@@ -421,8 +421,8 @@ TEST(Published, BivariateNormal) {
                   number(row[4]), got, 1e-14, "computed");
     }
 
-    auto const settings = support::one_index({0.5}, 0.5);
-    support::Names const names{support::name(0, 1.0, 1.0), support::name(0, 1.0, 1.0)};
+    auto const settings = tests::one_index({0.5}, 0.5);
+    tests::Names const names{tests::name(0, 1.0, 1.0), tests::name(0, 1.0, 1.0)};
     model::Migration const migration{settings};
     std::size_t const scenarios = 1'000'000;
     auto const losses = model::Simulation{names, settings, migration}.losses(0, scenarios, 0);
@@ -434,10 +434,10 @@ TEST(Published, BivariateNormal) {
 
 // The worked example of the merger guidelines, in points of 1/10,000.
 TEST(Published, Herfindahl) {
-    support::Names names;
+    tests::Names names;
     std::vector<std::uint32_t> members;
     for (double const share : {25.0, 20.0, 15.0, 10.0, 9.0, 8.0, 7.0, 6.0}) {
-        auto name = *support::name(0, share, share);
+        auto name = *tests::name(0, share, share);
         name.counterparty_id = fmt::format("C{}", names.size());
         members.push_back(static_cast<std::uint32_t>(names.size()));
         names.push_back(std::make_shared<model::Name const>(std::move(name)));

@@ -27,7 +27,7 @@ double seconds(auto&& work) {
 // X = loading Z + sqrt(1 - rho) e for each name, against its default threshold.
 class Textbook {
 public:
-    Textbook(support::Names const& names, model::Settings const& settings) {
+    Textbook(tests::Names const& names, model::Settings const& settings) {
         model::Migration const migration{settings};
         auto const factor = model::factor(settings.indices.correlation);
         auto const size = static_cast<Eigen::Index>(names.size());
@@ -72,8 +72,8 @@ private:
 }  // namespace
 
 int main() {
-    auto const settings = support::lender_settings();
-    auto const names = support::lender(1'500);
+    auto const settings = tests::lender_settings();
+    auto const names = tests::lender(1'500);
     model::Migration const migration{settings};
     model::Simulation const judge{names, settings, migration};
     std::set<std::tuple<int, std::string, std::string>> cells;

@@ -6,7 +6,7 @@
 #include <cmath>
 #include <random>
 
-namespace support {
+namespace tests {
 namespace {
 
 constexpr std::array sectors{"AGRI",  "CONSTR",  "ENERGY", "FINANCE", "HEALTH",
@@ -98,4 +98,4 @@ std::shared_ptr<model::Name const> name(int rank, double exposure, double loss) 
     return std::make_shared<model::Name const>(std::move(name));
 }
 
-}  // namespace support
+}  // namespace tests

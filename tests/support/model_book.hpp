@@ -10,7 +10,7 @@
 
 // Books made up in memory, for the tests of the model.
 
-namespace support {
+namespace tests {
 
 using Names = std::vector<std::shared_ptr<model::Name const>>;
 
@@ -29,4 +29,4 @@ Names lender(std::size_t counterparties);
 // A counterparty of a grade (by rank) that loses `loss` of `exposure` base currency on default.
 std::shared_ptr<model::Name const> name(int rank, double exposure, double loss);
 
-}  // namespace support
+}  // namespace tests

@@ -3,7 +3,7 @@
 #include <cmath>
 #include <numbers>
 
-namespace support {
+namespace tests {
 
 // E[f(Z)] of a standard normal Z, by the trapezoid rule: for smooth f it converges faster than any
 // power of the step, here to the last digits of a double.
@@ -17,4 +17,4 @@ double over_normal(auto const& f) {
     return sum * step / std::sqrt(2.0 * std::numbers::pi);
 }
 
-}  // namespace support
+}  // namespace tests
