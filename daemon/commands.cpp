@@ -243,6 +243,16 @@ Rows part_rows(alerts::Cause const& cause) {
     return rows;
 }
 
+// The limit as the folder's file has it; its defaults where there is no such file or limit.
+alerts::Limit limit_in_file(Common const& common, std::string const& limit_id) {
+    auto const loaded = config::load(common.config);
+    if (auto const* const rules = std::get_if<config::Rules>(&loaded)) {
+        auto const limit = std::ranges::find(*rules->limits, limit_id, &alerts::Limit::limit_id);
+        if (limit != rules->limits->end()) return *limit;
+    }
+    return {};
+}
+
 int show_alert(Common const& common, std::int64_t alert_id) {
     auto connection = open(common, "loadline_reader", "alert");
     auto const row = read_alert(connection, alert_id);
@@ -262,7 +272,10 @@ int show_alert(Common const& common, std::int64_t alert_id) {
         return done;
     }
     auto const cause = cause_of(*row.at(0, "cause"));
-    std::cout << visible(sentence_of(row, cause)) << "\n\n";
+    std::cout << visible(sentence_of(row, cause)) << '\n';
+    if (auto const limit = limit_in_file(common, *row.at(0, "limit_id")); !limit.act.empty())
+        std::cout << "What to do: " << visible(limit.act) << '\n';
+    std::cout << '\n';
     print_one(std::cout, row, Format::table);
     auto const position = [](alerts::Position const& at) {
         return fmt::format("observed {}, level {}", readable_figure(fmt::format("{}", at.observed)),
@@ -274,16 +287,6 @@ int show_alert(Common const& common, std::int64_t alert_id) {
     std::cout << "\nhistory\n";
     print(std::cout, events, Format::table);
     return done;
-}
-
-// Calendar days until business days exist: the acknowledgement holds through the last of them.
-int acknowledge_for_days(Common const& common, std::string const& limit_id) {
-    auto const loaded = config::load(common.config);
-    if (auto const* const rules = std::get_if<config::Rules>(&loaded)) {
-        auto const limit = std::ranges::find(*rules->limits, limit_id, &alerts::Limit::limit_id);
-        if (limit != rules->limits->end()) return limit->acknowledge_for_days;
-    }
-    return alerts::Limit{}.acknowledge_for_days;
 }
 
 std::optional<model::Day> parse_day(std::string const& text) {
@@ -318,8 +321,10 @@ int decide(Common const& common, std::int64_t alert_id, std::string const& note,
     if (until.empty()) {
         auto const now = std::chrono::time_point_cast<std::chrono::microseconds>(
             std::chrono::system_clock::now());
-        last_day = day_of(now, service.time_zone) +
-                   std::chrono::days{acknowledge_for_days(common, *row.at(0, "limit_id"))};
+        last_day =
+            day_of(now, service.time_zone) +
+            // calendar days until business days exist
+            std::chrono::days{limit_in_file(common, *row.at(0, "limit_id")).acknowledge_for_days};
     } else {
         last_day = parse_day(until);
         if (!last_day) {

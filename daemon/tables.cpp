@@ -908,7 +908,7 @@ std::int64_t decide(Connection& connection, std::string const& call, std::int64_
             throw DatabaseError{
                 Trouble::usage, "P0002",
                 fmt::format("there is no alert {}: `loadline alerts` lists them", alert_id)};
-        std::int64_t const version =
+        auto const version =
             work.exec_params1(call, alert_id, seen[0][0].as<std::int64_t>(), parameters...)[0]
                 .template as<std::int64_t>();
         work.commit();

@@ -107,8 +107,11 @@ std::string_view called(alerts::SubjectKey const& key, model::Book const& book) 
     return {};
 }
 
-void log_moves(std::span<ExplainedOutcome const> outcomes, model::Book const& book) {
-    for (auto const& [outcome, explanation] : outcomes)
+// Returns how many there are.
+std::size_t log_moves(std::span<ExplainedOutcome const> outcomes, model::Book const& book) {
+    std::size_t moves = 0;
+    for (auto const& [outcome, explanation] : outcomes) {
+        moves += outcome.moves.size();
         for (auto const& move : outcome.moves)
             spdlog::info(
                 "event={} limit={} subject_kind={} subject=\"{}\" from={} to={} severity={} "
@@ -122,6 +125,8 @@ void log_moves(std::span<ExplainedOutcome const> outcomes, model::Book const& bo
                                 explanation ? explanation->cause : alerts::Cause{},
                                 explanation ? explanation->nature : std::nullopt,
                                 book.settings()->base_currency)));
+    }
+    return moves;
 }
 
 // Each once, when it begins.
@@ -350,10 +355,10 @@ void Watch::decide(Turn& turn, Trigger trigger, model::Instant as_of) {
     turn.commit();
 
     log_unmeasured(now.checks, known_ ? known_->checks : alerts::Checks{});
-    log_moves(written, now.book);
+    auto const moves = log_moves(written, now.book);
     spdlog::info("event=assessed trigger={} changes={} names={} usages={} moved={}",
                  word(trigger_words, trigger), changes.consumed, now.book.names().size(),
-                 now.checks.usages.size(), written.size());
+                 now.checks.usages.size(), moves);
     known_ = std::move(now);
 }
 

@@ -454,7 +454,7 @@ std::vector<SetAside> Book::set_aside() const {
     for (auto const& [currency, rates] : shared_->rates)
         newest(
             rates, [&](RateRow const& row) { return row.quoted_on <= as_of_.day; }, is_usable_rate,
-            [&](RateRow const& row) {
+            [&, &currency = currency](RateRow const& row) {
                 rows.push_back({"fx_rate", key_of({currency, iso(row.quoted_on)}),
                                 "base_per_unit is not a number from 1e-7 to 1e7", std::nullopt});
             });
@@ -462,7 +462,7 @@ std::vector<SetAside> Book::set_aside() const {
         newest(
             amounts, [&](CapitalRow const& row) { return row.as_of <= as_of_.day; },
             is_usable_capital,
-            [&](CapitalRow const& row) {
+            [&, &kind = kind](CapitalRow const& row) {
                 rows.push_back({"capital", kind + "/" + iso(row.as_of),
                                 "amount is not a number above 0 and in range", std::nullopt});
             });

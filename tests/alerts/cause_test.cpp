@@ -65,7 +65,7 @@ protected:
         after = before;
     }
 
-    static Inputs company(std::string id) {
+    static Inputs company(std::string const& id) {
         Inputs inputs;
         inputs.counterparty_id = id;
         inputs.row.emplace();

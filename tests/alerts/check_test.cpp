@@ -30,7 +30,7 @@ protected:
         shared.capital["tier1"] = {{today - std::chrono::days{9}, 1000.0}};
     }
 
-    Name& add(std::string id, double exposure, std::string grade = "G2") {
+    Name& add(std::string id, double exposure, std::string const& grade = "G2") {
         auto name = std::make_shared<Name>();
         name->counterparty_id = std::move(id);
         name->segment = "corporate";

@@ -5,8 +5,8 @@
 #include <gmock/gmock.h>
 #include <gtest/gtest.h>
 #include <nlohmann/json.hpp>
-#include <signal.h>
 
+#include <csignal>
 #include <cstdlib>
 #include <filesystem>
 

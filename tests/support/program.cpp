@@ -1,11 +1,11 @@
 #include "tests/support/program.hpp"
 
 #include <fcntl.h>
-#include <signal.h>
 #include <spawn.h>
 #include <sys/wait.h>
 #include <unistd.h>
 
+#include <csignal>
 #include <cstdlib>
 #include <fstream>
 #include <sstream>
@@ -75,7 +75,7 @@ Ran run_loadline(std::vector<std::string> const& arguments,
     return {WIFEXITED(status) ? WEXITSTATUS(status) : -1, folder.read("out"), folder.read("err")};
 }
 
-Served::Served(std::filesystem::path const& config, std::vector<std::string> environment)
+Served::Served(std::filesystem::path const& config, std::vector<std::string> const& environment)
     : pid_{start({"serve", "--config", config.string()}, environment, folder_.path())} {}
 
 Served::~Served() {

@@ -40,7 +40,7 @@ Ran run_loadline(std::vector<std::string> const& arguments,
 // `loadline serve` in the background; killed at the end if it has not ended before.
 class Served {
 public:
-    Served(std::filesystem::path const& config, std::vector<std::string> environment);
+    Served(std::filesystem::path const& config, std::vector<std::string> const& environment);
     ~Served();
     Served(Served const&) = delete;
     Served& operator=(Served const&) = delete;
