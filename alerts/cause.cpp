@@ -330,18 +330,18 @@ Explanation explain_at_start(Checks const* before, Usage const& after, Severity 
     return explanation;
 }
 
-std::string scaled(double value) {
+std::string scaled(double value, int more) {
     double const size = std::abs(value);
-    if (size >= 999.5e6) return fmt::format("{:.2f} bn", value / 1e9);
-    if (size >= 999.5e3) return fmt::format("{:.1f} m", value / 1e6);
-    if (size >= 999.5) return fmt::format("{:.1f} k", value / 1e3);
-    return fmt::format("{:.4g}", value);
+    if (size >= 999.5e6) return fmt::format("{:.{}f} bn", value / 1e9, 2 + more);
+    if (size >= 999.5e3) return fmt::format("{:.{}f} m", value / 1e6, 1 + more);
+    if (size >= 999.5) return fmt::format("{:.{}f} k", value / 1e3, 1 + more);
+    return fmt::format("{:.{}g}", value, 4 + more);
 }
 
-std::string readable(double value, Unit unit, std::string_view currency) {
-    if (unit == Unit::fraction) return fmt::format("{:.3g}%", 100.0 * value);
-    if (unit == Unit::index) return fmt::format("{:.4f}", value);
-    return fmt::format("{} {}", currency, scaled(value));
+std::string readable(double value, Unit unit, std::string_view currency, int more) {
+    if (unit == Unit::fraction) return fmt::format("{:.{}g}%", 100.0 * value, 3 + more);
+    if (unit == Unit::index) return fmt::format("{:.{}f}", value, 4 + more);
+    return fmt::format("{} {}", currency, scaled(value, more));
 }
 
 std::string sentence(Alert const& alert, std::string_view subject_name, Cause const& cause,
@@ -359,7 +359,11 @@ std::string sentence(Alert const& alert, std::string_view subject_name, Cause co
     if (!subject_name.empty()) who += fmt::format(" ({})", subject_name);
     std::string measure = spaced(word(measure_words, alert.measure));
     measure.front() = static_cast<char>(measure.front() - 'a' + 'A');
-    auto const amount = [&](double value) { return readable(value, unit, currency); };
+    bool const alike = alert.observed != alert.level && readable(alert.observed, unit, currency) ==
+                                                            readable(alert.level, unit, currency);
+    auto const amount = [&](double value) {
+        return readable(value, unit, currency, alike ? 3 : 0);
+    };
 
     std::string text = fmt::format("{} of {} is {}", measure, who, amount(alert.observed));
     auto const severity = word(severity_words, alert.severity);

@@ -83,9 +83,9 @@ std::vector<Explanation> explain(Stage before, Stage after,
 Explanation explain_at_start(Checks const* before, Usage const& after, Severity severity);
 
 // Few digits for a reader; exact figures are in the tables. "12.4 m"; with its unit "EUR 12.4 m",
-// "2.5%", "0.0213".
-std::string scaled(double value);
-std::string readable(double value, Unit unit, std::string_view currency);
+// "2.5%", "0.0213". `more` digits where two figures would look alike.
+std::string scaled(double value, int more = 0);
+std::string readable(double value, Unit unit, std::string_view currency, int more = 0);
 
 // One sentence: who, what, over which level, since what, and whose act it was.
 std::string sentence(Alert const& alert, std::string_view subject_name, Cause const& cause,

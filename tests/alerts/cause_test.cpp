@@ -286,6 +286,16 @@ TEST(Sentence, TellsWhoWhatAndWhy) {
               "not by an act of our own (passive).");
 }
 
+TEST(Sentence, TellsApartWhatRoundsAlike) {
+    Alert alert;
+    alert.key = {"L1", SubjectKind::name, "C1"};
+    alert.state = State::open;
+    alert.observed = 7'660'000.0;
+    alert.level = 7'650'000.0;
+    EXPECT_EQ(sentence(alert, "", {}, std::nullopt, "EUR"),
+              "Exposure of name C1 is EUR 7.6600 m, against the warning level EUR 7.6500 m of L1.");
+}
+
 TEST(Readable, GivesAReaderThreeDigits) {
     EXPECT_EQ(readable(12'345'678.9, Unit::money, "EUR"), "EUR 12.3 m");
     EXPECT_EQ(readable(-1'234'567'890.0, Unit::money, "EUR"), "EUR -1.23 bn");
