@@ -135,7 +135,7 @@ void log_unmeasured(alerts::Checks const& checks, alerts::Checks const& before) 
     std::ranges::set_difference(checks.unmeasured, before.unmeasured, std::back_inserter(begun), {},
                                 &alerts::Unmeasured::key, &alerts::Unmeasured::key);
     for (auto const& row : begun)
-        spdlog::info("event=unmeasured limit={} subject_kind={} subject=\"{}\" reason=\"{}\"",
+        spdlog::info(R"(event=unmeasured limit={} subject_kind={} subject="{}" reason="{}")",
                      row.key.limit_id, word(alerts::subject_kind_words, row.key.kind),
                      in_log(row.key.subject), row.reason);
 }
