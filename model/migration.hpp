@@ -18,7 +18,7 @@ namespace model {
 //               where the mass is 0 or 1
 //
 // Cumulated from default upwards; the best grade takes what rounding leaves.
-// Source: Gupton, Finger & Bhatia (1997), CreditMetrics technical document, on Merton (1974), On
+// Source: Gupton, Finger & Bhatia (1997), technical document, on Merton (1974), On
 // the pricing of corporate debt, Journal of Finance 29(2).
 class Migration {
 public:
