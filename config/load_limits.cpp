@@ -243,7 +243,7 @@ private:
         auto const id = read_code(file_, node, "an id");
         if (!id) return;
         auto const [first, is_new] = ids_.try_emplace(*id, node->place);
-        if (is_reserved(*id))
+        if (model::is_reserved(*id))
             file_.fault(node->place, "the reserved word " + in_quotes(*id), "another id");
         else if (!is_new)
             file_.fault(node->place,
@@ -369,7 +369,7 @@ private:
             fmt::format("the code of a {}", alerts::word(alerts::subject_kind_words, kind));
         auto code = read_code(file_, &node, expected);
         bool const usable =
-            kind == SubjectKind::grade || !code || !is_reserved(*code) ||
+            kind == SubjectKind::grade || !code || !model::is_reserved(*code) ||
             (*code == "unknown" && (kind == SubjectKind::sector || kind == SubjectKind::country));
         if (usable) return code;
         file_.fault(node.place, "the reserved word " + in_quotes(*code), expected);

@@ -46,7 +46,8 @@ bool is_index_name(std::string_view name) {
     for (std::string_view const kind : {"sector:", "country:"})
         if (name.starts_with(kind)) {
             auto const code = name.substr(kind.size());
-            return is_code(code) && (!is_reserved(code) || code == "others" || code == "unknown");
+            return is_code(code) &&
+                   (!model::is_reserved(code) || code == "others" || code == "unknown");
         }
     return false;
 }
@@ -235,7 +236,7 @@ private:
             auto const name = read_code(file_, &item, expected);
             if (!name) {
                 good = false;
-            } else if (is_reserved(*name)) {
+            } else if (model::is_reserved(*name)) {
                 good = false;
                 file_.fault(item.place, "the reserved word " + in_quotes(*name), expected);
             } else if (std::ranges::find(names, *name) != names.end()) {

@@ -504,11 +504,6 @@ bool is_code(std::string_view text) {
            std::ranges::none_of(text, [](char c) { return static_cast<unsigned char>(c) < 0x20; });
 }
 
-bool is_reserved(std::string_view code) {
-    return code == "default" || code == "withdrawn" || code == "unknown" || code == "others" ||
-           code == "by";
-}
-
 bool is_kind(File& file, YamlNode const& node, YamlNode::Kind kind, std::string const& expected) {
     if (node.kind == kind) return true;
     switch (node.kind) {

@@ -101,8 +101,6 @@ std::string one_of(std::span<std::string_view const> words, std::string_view ins
 
 // An id or code: not empty, no comma, no control character, no blank at either end.
 bool is_code(std::string_view text);
-// Words with a meaning of their own wherever codes stand.
-bool is_reserved(std::string_view code);
 
 // Whether a list, map or scalar stands there; a fault if not.
 bool is_kind(File& file, YamlNode const& node, YamlNode::Kind kind, std::string const& expected);

@@ -35,15 +35,10 @@ std::string key_of(std::initializer_list<std::string_view> parts) {
     return key;
 }
 
-// Words with a meaning of their own in limits.yaml and in the rating table.
-bool is_reserved(std::string_view code) {
-    return code == "default" || code == "withdrawn" || code == "others" || code == "by";
-}
-
 // Codes become subjects; a comma joins two of them, and control characters hide from the reader.
 bool is_usable_code(std::string_view code) {
-    return !code.empty() && code.size() <= longest_code && !is_reserved(code) &&
-           std::ranges::none_of(code, [](char c) {
+    return !code.empty() && code.size() <= longest_code &&
+           (!is_reserved(code) || code == "unknown") && std::ranges::none_of(code, [](char c) {
                return c == ',' || static_cast<unsigned char>(c) < 0x20 || c == 0x7f;
            });
 }

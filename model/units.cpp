@@ -5,6 +5,11 @@
 
 namespace model {
 
+bool is_reserved(std::string_view code) {
+    return code == "default" || code == "withdrawn" || code == "unknown" || code == "others" ||
+           code == "by";
+}
+
 std::string iso(Day day) {
     std::chrono::year_month_day const date{day};
     std::array<char, 24> text{};

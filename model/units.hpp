@@ -112,6 +112,9 @@ private:
     std::vector<std::string> names_;
 };
 
+// Words with a meaning of their own wherever codes stand, in the tables and in limits.yaml.
+bool is_reserved(std::string_view code);
+
 using Time = std::chrono::sys_time<std::chrono::microseconds>;
 using Day = std::chrono::sys_days;
 
