@@ -16,38 +16,47 @@ using NamePtr = std::shared_ptr<Name const>;
 constexpr std::array steps{Part::exchange_rate, Part::collateral, Part::exposure, Part::rating,
                            Part::model,         Part::capital,    Part::limit,    Part::portfolio};
 
+using Subjects = std::span<std::pair<SubjectKey, Severity> const>;
+
+Limit const* find_limit(Limits const& limits, std::string_view limit_id) {
+    auto const limit = std::ranges::find(limits, limit_id, &Limit::limit_id);
+    return limit != limits.end() ? &*limit : nullptr;
+}
+
 // One counterparty on both sides of the turn.
-struct Pair {
+struct BothSides {
     NamePtr before;
     NamePtr after;
     model::NameFigures const* figures_before = nullptr;
     model::NameFigures const* figures_after = nullptr;
 };
 
-std::vector<Pair> pairs(Stage const& before, Stage const& after) {
-    std::vector<Pair> all;
+// Whether what one of the subjects is held against depends on every name.
+bool needs_everybody(Stage const& before, Stage const& after, Subjects subjects) {
+    return std::ranges::any_of(subjects, [&](auto const& subject) {
+        return std::ranges::any_of(
+            std::array{&before.limits, &after.limits}, [&](Limits const* limits) {
+                auto const* const limit = find_limit(*limits, subject.first.limit_id);
+                return limit != nullptr && is_held_against_portfolio(*limit);
+            });
+    });
+}
+
+// The names that can have moved the subjects, by counterparty_id: those that are not the same any
+// more, and with them the others of the subjects' sets, or everybody.
+std::vector<BothSides> both_sides(Stage const& before, Stage const& after, View const& view,
+                                  Subjects subjects, bool everybody) {
     auto const& old_names = before.book.names();
     auto const& new_names = after.book.names();
-    std::size_t b = 0;
-    std::size_t a = 0;
-    while (b < old_names.size() || a < new_names.size()) {
-        bool const has_old = b < old_names.size() &&
-                             (a == new_names.size() ||
-                              old_names[b]->counterparty_id <= new_names[a]->counterparty_id);
-        bool const has_new = a < new_names.size() &&
-                             (b == old_names.size() ||
-                              new_names[a]->counterparty_id <= old_names[b]->counterparty_id);
-        Pair pair;
-        if (has_old) {
-            pair.before = old_names[b];
-            pair.figures_before = &before.figures.names[b++];
-        }
-        if (has_new) {
-            pair.after = new_names[a];
-            pair.figures_after = &after.figures.names[a++];
-        }
-        all.push_back(std::move(pair));
-    }
+    std::vector<bool> asked(new_names.size(), everybody);
+    for (auto const& [key, severity] : subjects)
+        for (auto const i : view.members(key.kind, key.subject)) asked[i] = true;
+    std::vector<BothSides> all;
+    each_pair(old_names, new_names, [&](auto o, auto n) {
+        if (o && n && old_names[*o] == new_names[*n] && !asked[*n]) return;
+        all.push_back({o ? old_names[*o] : nullptr, n ? new_names[*n] : nullptr,
+                       o ? &before.figures[*o] : nullptr, n ? &after.figures[*n] : nullptr});
+    });
     return all;
 }
 
@@ -88,19 +97,21 @@ void keep_facts_of(Name const& before, Name& name) {
 // The path from one stage to the other.
 class Walk {
 public:
-    Walk(Stage const& before, Stage const& after)
+    Walk(Stage const& before, View const& view_before, Stage const& after, View const& view_after,
+         Subjects subjects)
         : before_{before},
           after_{after},
-          pairs_{pairs(before, after)},
+          view_before_{view_before},
+          everybody_{needs_everybody(before, after, subjects)},
+          pairs_{both_sides(before, after, view_after, subjects, everybody_)},
           rates_{rates_moved(before, after)},
           migration_before_{*before.book.settings()},
           migration_after_{*after.book.settings()},
           same_model_{before.book.settings() == after.book.settings()} {}
 
     // Where the subjects stand after a step.
-    [[nodiscard]] std::vector<Position> positions(
-        Part step, std::span<std::pair<SubjectKey, Severity> const> subjects,
-        std::span<Position const> last) const {
+    [[nodiscard]] std::vector<Position> positions(Part step, Subjects subjects,
+                                                  std::span<Position const> last) const {
         if (step == Part::portfolio) return {last.begin(), last.end()};
         std::vector<NamePtr> names;
         std::vector<model::NameFigures> figures;
@@ -119,7 +130,8 @@ public:
                         nullptr,
                         shared_of.book.shared(),
                         *(model_moved ? after_ : before_).book.settings(),
-                        shared_of.book.as_of().day};
+                        shared_of.book.as_of().day,
+                        everybody_ ? &view_before_ : nullptr};
         auto const& limits = step >= Part::limit ? after_.limits : before_.limits;
         std::vector<Position> positions;
         for (std::size_t i = 0; i < subjects.size(); ++i)
@@ -129,36 +141,30 @@ public:
     }
 
     // The view before anything moved, and the one with the firm's own acts taken out.
-    [[nodiscard]] std::vector<Position> positions_before(
-        std::span<std::pair<SubjectKey, Severity> const> subjects,
-        std::span<Position const> last) const {
-        View const view{before_.book.names(),    {},
-                        before_.figures.names,   nullptr,
-                        before_.book.shared(),   *before_.book.settings(),
-                        before_.book.as_of().day};
+    [[nodiscard]] std::vector<Position> positions_before(Subjects subjects,
+                                                         std::span<Position const> last) const {
         std::vector<Position> positions;
         for (std::size_t i = 0; i < subjects.size(); ++i)
-            positions.push_back(
-                position(view, before_.limits, subjects[i].first, subjects[i].second, last[i]));
+            positions.push_back(position(view_before_, before_.limits, subjects[i].first,
+                                         subjects[i].second, last[i]));
         return positions;
     }
 
     // Whether each subject would be inside its level with the firm's own acts taken out.
-    [[nodiscard]] std::vector<bool> inside_without_own_acts(
-        std::span<std::pair<SubjectKey, Severity> const> subjects) const;
+    [[nodiscard]] std::vector<bool> inside_without_own_acts(Subjects subjects) const;
 
 private:
     // A subject that is not there holds nothing against the level it meets later.
     static Position position(View const& view, Limits const& limits, SubjectKey const& key,
                              Severity severity, Position const& last) {
-        auto const limit = std::ranges::find(limits, key.limit_id, &Limit::limit_id);
-        if (limit == limits.end()) return {0.0, std::nullopt};
+        auto const* const limit = find_limit(limits, key.limit_id);
+        if (limit == nullptr) return {0.0, std::nullopt};
         auto const usage = view.usage(*limit, key.kind, key.subject);
         if (!usage) return {0.0, last.level};
         return {usage->observed, usage->level(severity)};
     }
 
-    [[nodiscard]] NamePtr name_after(Part step, Pair const& pair) const {
+    [[nodiscard]] NamePtr name_after(Part step, BothSides const& pair) const {
         if (pair.before == pair.after && same_model_) return pair.before;
         auto const* const inputs_before =
             pair.before ? before_.book.inputs(pair.before->counterparty_id) : nullptr;
@@ -196,8 +202,9 @@ private:
         return name;
     }
 
-    [[nodiscard]] model::NameFigures figures_after(Part step, Pair const& pair,
+    [[nodiscard]] model::NameFigures figures_after(Part step, BothSides const& pair,
                                                    Name const& name) const {
+        if (pair.before == pair.after && same_model_) return *pair.figures_before;
         auto figures = step >= Part::model
                            ? model::closed_form(name, *after_.book.settings(), migration_after_)
                            : model::closed_form(name, *before_.book.settings(), migration_before_);
@@ -219,7 +226,9 @@ private:
 
     Stage before_;
     Stage after_;
-    std::vector<Pair> pairs_;
+    View const& view_before_;
+    bool everybody_;
+    std::vector<BothSides> pairs_;
     model::Shared rates_;
     model::Migration migration_before_;
     model::Migration migration_after_;
@@ -241,8 +250,7 @@ model::Inputs without_own_acts(model::Inputs const* before, model::Inputs after)
     return after;
 }
 
-std::vector<bool> Walk::inside_without_own_acts(
-    std::span<std::pair<SubjectKey, Severity> const> subjects) const {
+std::vector<bool> Walk::inside_without_own_acts(Subjects subjects) const {
     std::vector<NamePtr> names;
     std::vector<model::NameFigures> figures;
     auto const& settings = *after_.book.settings();
@@ -269,9 +277,9 @@ std::vector<bool> Walk::inside_without_own_acts(
         names, {}, figures, nullptr, after_.book.shared(), settings, after_.book.as_of().day};
     std::vector<bool> inside;
     for (auto const& [key, severity] : subjects) {
-        auto const limit = std::ranges::find(after_.limits, key.limit_id, &Limit::limit_id);
+        auto const* const limit = find_limit(after_.limits, key.limit_id);
         auto const usage =
-            limit == after_.limits.end() ? std::nullopt : view.usage(*limit, key.kind, key.subject);
+            limit == nullptr ? std::nullopt : view.usage(*limit, key.kind, key.subject);
         auto const level = usage ? usage->level(severity) : std::nullopt;
         inside.push_back(!level || usage->observed <= *level);
     }
@@ -280,6 +288,11 @@ std::vector<bool> Walk::inside_without_own_acts(
 
 }  // namespace
 
+View view_of(Stage const& stage, model::Figures const* errors, View const* before) {
+    return {stage.book.names(),  stage.book.unknown(),   stage.figures,          errors,
+            stage.book.shared(), *stage.book.settings(), stage.book.as_of().day, before};
+}
+
 std::optional<Part> Cause::largest() const {
     double const direction = after.excess() - before.excess() < 0.0 ? -1.0 : 1.0;
     auto const largest = std::ranges::max_element(
@@ -287,20 +300,22 @@ std::optional<Part> Cause::largest() const {
     return largest == parts.end() ? std::nullopt : std::optional{largest->first};
 }
 
-std::vector<Explanation> explain(Stage before, Stage after,
-                                 std::span<std::pair<SubjectKey, Severity> const> subjects) {
+std::vector<Explanation> explain(Stage before, Stage after, Subjects subjects) {
     if (subjects.empty()) return {};
+    std::optional<View> made_before;
+    std::optional<View> made_after;
+    auto const& view_before =
+        before.view != nullptr ? *before.view : made_before.emplace(view_of(before));
+    auto const& view = after.view != nullptr ? *after.view : made_after.emplace(view_of(after));
     std::vector<Position> last;
-    View const view{after.book.names(),  after.book.unknown(),   after.figures.names,   nullptr,
-                    after.book.shared(), *after.book.settings(), after.book.as_of().day};
     for (auto const& [key, severity] : subjects) {
-        auto const limit = std::ranges::find(after.limits, key.limit_id, &Limit::limit_id);
+        auto const* const limit = find_limit(after.limits, key.limit_id);
         auto const usage =
-            limit == after.limits.end() ? std::nullopt : view.usage(*limit, key.kind, key.subject);
+            limit == nullptr ? std::nullopt : view.usage(*limit, key.kind, key.subject);
         last.push_back(usage ? Position{usage->observed, usage->level(severity)} : Position{});
     }
 
-    Walk const walk{before, after};
+    Walk const walk{before, view_before, after, view, subjects};
     auto here = walk.positions_before(subjects, last);
     std::vector<Explanation> explanations(subjects.size());
     for (std::size_t i = 0; i < subjects.size(); ++i) {

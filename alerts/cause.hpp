@@ -62,9 +62,14 @@ struct Explanation {
 // One side of a turn.
 struct Stage {
     model::Book const& book;
-    model::Figures const& figures;
+    std::span<model::NameFigures const> figures;  // as book.names()
     Limits const& limits;
+    View const* view = nullptr;  // of all this, where it is made already
 };
+
+// A stage as limits see it; the rest as View's.
+View view_of(Stage const& stage, model::Figures const* errors = nullptr,
+             View const* before = nullptr);
 
 // Walks from the book before to the book after, one kind of input at a time: exchange rates, then
 // collateral, exposures, ratings, the model's rules, capital, limits; what is left is the rest of

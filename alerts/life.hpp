@@ -152,7 +152,7 @@ struct Outcome {
 
 // What a turn knows of its alerts.
 struct Scene {
-    std::span<Alert const> alerts;  // the live ones
+    std::span<Alert const> alerts;  // the live ones that the turn's checks reach
     Checks const& checks;           // now
     Checks const* checks_before;    // at the end of the last turn; null where there was none
     Limits const& limits;           // now

@@ -138,6 +138,11 @@ constexpr std::optional<Enum> find(std::pair<Enum, std::string_view> const (&wor
     return std::nullopt;
 }
 
+// What no name has alone: it depends on the whole book, and is known after a whole pass only.
+constexpr bool is_contribution(Measure measure) {
+    return measure == Measure::var_contribution || measure == Measure::es_contribution;
+}
+
 constexpr Unit unit_of(Measure measure) {
     switch (measure) {
         case Measure::default_probability:

@@ -7,7 +7,9 @@
 #include "daemon/schema.hpp"
 #include "daemon/service.hpp"
 #include "daemon/tables.hpp"
+#include "daemon/verify.hpp"
 #include "daemon/watch.hpp"
+#include "model/verify.hpp"
 
 #include <CLI/CLI.hpp>
 #include <fmt/format.h>
@@ -176,12 +178,22 @@ int assess(Common const& common, std::optional<std::int64_t> seed) {
     return done;
 }
 
+int verify(Common const& common, VerifyPlan const& plan) {
+    auto const rules = or_refuse(config::load(common.config));
+    Connection connection{rules.service.database, "verify", "loadline_engine"};
+    auto const found = verify(connection, rules, plan,
+                              [](std::string_view doing) { std::cerr << visible(doing) << '\n'; });
+    print(std::cout, found.checks, common.as());
+    std::cerr << (found.agrees ? "agrees; " : "differs; ") << found.note << '\n';
+    return found.agrees ? done : failed;
+}
+
 int list_alerts(Common const& common, bool ended_too) {
     auto connection = open(common, "loadline_reader", "alerts");
     auto const rows = read_alerts(connection, ended_too);
     print(std::cout, rows, common.as());
     if (common.as() == Format::table) {
-        auto const last = read_assessment(connection, std::nullopt);
+        auto const last = read_last_assessment(connection);
         std::cerr
             << (last.rows.empty()
                     ? "nothing has been assessed yet: run `loadline assess` or `loadline serve`\n"
@@ -462,6 +474,23 @@ int run(int argc, char** argv) {
     pass->add_option("--seed", seed, "random numbers of another seed than model.yaml's")
         ->check(CLI::NonNegativeNumber);
     pass->callback([&] { command = [&] { return assess(common, seed); }; });
+
+    VerifyPlan verify_plan;
+    auto* const verifying =
+        add(app, "verify",
+            fmt::format("the engine against an independent simulation of the current book: exit 1 "
+                        "where they differ, which right figures do in {} of runs",
+                        model::false_alarms),
+            "loadline verify --scenarios 4000000");
+    verifying
+        ->add_option("--scenarios", verify_plan.scenarios,
+                     "of the simulation: four times as many find differences half as large")
+        ->check(CLI::Range(std::uint64_t{1'000}, std::uint64_t{1'000'000'000}))
+        ->capture_default_str();
+    verifying
+        ->add_option("--seed", verify_plan.seed, "random numbers of another seed than model.yaml's")
+        ->check(CLI::NonNegativeNumber);
+    verifying->callback([&] { command = [&] { return verify(common, verify_plan); }; });
 
     add(app, "check-config",
         "every mistake of the folder, with file, line and column; exit 2 if any",

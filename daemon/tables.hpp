@@ -7,11 +7,14 @@
 #include "daemon/connection.hpp"
 #include "model/assess.hpp"
 
+#include <functional>
+#include <map>
 #include <memory>
 #include <optional>
 #include <span>
 #include <string>
 #include <string_view>
+#include <variant>
 #include <vector>
 
 // Every statement on the tables, each beside the function that runs it.
@@ -38,13 +41,31 @@ struct RulesDigests {
     friend bool operator==(RulesDigests const&, RulesDigests const&) = default;
 };
 
-// An assessment's row, less what the figures say.
+// How much a turn assesses: every figure, or what changed counterparties have by themselves.
+enum class Scope { whole, touched };
+inline constexpr std::pair<Scope, std::string_view> scope_words[] = {{Scope::whole, "whole"},
+                                                                     {Scope::touched, "touched"}};
+
+// Whether an independent recomputation agrees with an assessment.
+enum class Health { unverified, agrees, differs };
+inline constexpr std::pair<Health, std::string_view> health_words[] = {
+    {Health::unverified, "unverified"}, {Health::agrees, "agrees"}, {Health::differs, "differs"}};
+
+// An assessment's row, less what the book says.
 struct AssessmentRow {
     std::string assessment_id;
     Trigger trigger = Trigger::start;
-    std::size_t names = 0;
-    std::string book_digest;
+    Scope scope = Scope::whole;
+    model::Totals totals;               // touched: the expected and the defaulted loss alone
+    model::Plan const* plan = nullptr;  // null where touched
     RulesDigests rules;
+};
+
+// What the newest whole assessment by some model and seed came to, and how.
+struct LastWhole {
+    std::variant<model::Plan, std::string> plan;  // or why it cannot be read
+    double loss_quantile = 0.0;
+    double expected_shortfall = 0.0;
 };
 
 // An id of the program's own making, so that a pass can be recognised after a lost connection.
@@ -65,18 +86,21 @@ public:
     Turn(Turn const&) = delete;
     Turn& operator=(Turn const&) = delete;
 
-    [[nodiscard]] model::Time as_of() const { return as_of_; }
-
     // Consumes every change visible here and reads what they touch; all inputs where `whole`.
     ReadChanges changes(bool whole);
+    [[nodiscard]] model::Time as_of() const { return as_of_; }  // after that
 
-    [[nodiscard]] std::vector<alerts::Alert> live_alerts();
+    [[nodiscard]] std::vector<alerts::Alert> live_alerts(alerts::Reach const& reach);
     // Usage as the last assessment left it, and the rules it went by; empty before the first one.
     [[nodiscard]] alerts::Checks usage();
     [[nodiscard]] std::optional<RulesDigests> rules_of_last_assessment();
+    [[nodiscard]] std::optional<LastWhole> last_whole(std::string const& model_digest,
+                                                      std::uint64_t seed);
 
-    void write(AssessmentRow const& assessment, model::Book const& book,
-               model::Figures const& figures, alerts::Checks const& checks,
+    // Writes only what differs. `before`: what the tables of figures hold; null where that is not
+    // known, and all of them, `usage` with them, are compared row by row.
+    void write(AssessmentRow const& assessment, alerts::Stage const* before,
+               alerts::Stage const& now, alerts::Differences const& usage,
                std::span<ExplainedOutcome const> outcomes);
     void write_rules(config::Rules const& rules, RulesDigests const& digests);
     void commit();
@@ -92,8 +116,12 @@ class Tables {
 public:
     explicit Tables(Connection connection);
 
-    // One cheap look: changes to consume, or an acknowledgement that is due.
-    bool anything_to_do();
+    // One cheap look: changes to consume, and an acknowledgement that is due.
+    struct Waiting {
+        bool changes = false;
+        bool due = false;
+    };
+    Waiting waiting();
     Turn begin();
 
 private:
@@ -124,8 +152,31 @@ Rows read_risk(Connection& connection, std::optional<std::string> const& counter
 Rows read_facilities(Connection& connection, std::string const& counterparty_id);
 Rows read_usage(Connection& connection, std::optional<std::string> const& limit_id);
 Rows read_set_aside(Connection& connection);
-// The newest assessment; after a request was consumed, the newest that one was asked for since.
+// The newest assessment.
+Rows read_last_assessment(Connection& connection);
+// The newest whole one; after a request was consumed, the newest that was asked for since.
 Rows read_assessment(Connection& connection, std::optional<std::int64_t> after_sequence);
+
+// As the engine: what an independent recomputation found of an assessment.
+void set_health(Connection& connection, std::string const& assessment_id, Health health);
+
+// The inputs as they are, and what the newest whole assessment left, in one read-only transaction.
+struct Snapshot {
+    model::Book::Changes inputs;  // whole
+    model::Time taken_at;
+    struct Whole {
+        std::string assessment_id;
+        std::string book_digest;
+        std::string model_digest;
+        model::Time as_of;
+        std::variant<model::Plan, std::string> plan;  // or why it cannot be read
+    };
+    std::optional<Whole> last_whole;
+    // By counterparty, as the newest assessment left them; its id.
+    std::map<std::string, double, std::less<>> es_contribution;
+    std::string es_contribution_of;
+};
+Snapshot read_snapshot(Connection& connection);
 
 // Times are shown in this zone.
 void show_times_in(Connection& connection, std::string const& time_zone);

@@ -1,299 +1,429 @@
 #include "model/assess.hpp"
 
-#include "model/simulation.hpp"
+#include "model/parallel.hpp"
+#include "model/pilot.hpp"
+#include "model/transform.hpp"
 
 #include <algorithm>
+#include <array>
 #include <cmath>
 #include <numeric>
 #include <stdexcept>
+#include <string_view>
+#include <utility>
 
 namespace model {
 namespace {
 
-// An atom of the loss at the quantile that holds so many scenarios is conditioned on by itself.
-constexpr std::size_t atom_scenarios_min = 30;
-// Of a large atom so many scenarios are looked at by name; any of them are a fair sample.
-constexpr std::size_t atom_scenarios_max = 10'000;
+// A plan serves a book while what it leaves out stays below these parts of credit VaR.
+constexpr double smoothing_max = 4e-4;
+constexpr double fourth_max = 3e-4;
+constexpr double image_max = 1e-4;  // of the tail
+constexpr std::uint32_t nodes_max = 4096;
+constexpr double atom_widths = 3.0;
+constexpr double work_max = 2e9;  // factors of large names
+constexpr double wider = 1.25;    // as the curve has it
+// More changes at once, or since it was built, and the transform is built anew.
+constexpr std::size_t changed_max = 32;
+constexpr std::size_t updates_max = 1000;
+constexpr std::size_t names_per_task = 1024;
 
-void ensure(bool holds, char const* what) {
-    if (!holds) throw std::logic_error(what);
-}
+}  // namespace
 
-double sum(std::vector<double> const& amounts) {
-    return std::accumulate(amounts.begin(), amounts.end(), 0.0);
-}
-
-struct Quantile {
-    double value = 0.0;
-    double error = 0.0;
+// What a pass found, by which a plan is judged.
+struct Fitness {
+    double smoothing = 0.0;  // of the quantile, over credit VaR
+    double fourth = 0.0;
+    double image = 0.0;  // over the tail
+    double effective_share = 1.0;
 };
 
-// The smallest x with at least `confidence` of the losses at or below it, and its error from the
-// order statistics around it: their ranks are binomial with deviation s. In a lumpy book one s to
-// the side may show no change where three do, so the widest of 1, 2 and 3 s counts. A rank beyond
-// the last stands for `all_lost`.
-Quantile quantile(std::vector<double> losses, double confidence, double all_lost) {
-    auto const count = static_cast<double>(losses.size());
-    double rank = std::ceil(confidence * count);          // from 1
-    if ((rank - 1.0) / count >= confidence) rank -= 1.0;  // the product was rounded up
-    double const deviation = std::sqrt(count * confidence * (1.0 - confidence));
+namespace {
 
-    double const lowest = std::max(1.0, rank - std::ceil(3.0 * deviation));
-    auto const from = losses.begin() + static_cast<std::ptrdiff_t>(lowest) - 1;
-    std::nth_element(losses.begin(), from, losses.end());
-    std::sort(from, losses.end());
-    auto const at = [&](double order) {
-        return order > count ? all_lost
-                             : losses[static_cast<std::size_t>(std::max(order, lowest)) - 1];
+// What is wrong with the plan, if anything; `part` of what may be.
+std::string unfit(Fitness const& fitness, Plan const& plan, double part) {
+    if (fitness.image > part * image_max) return "the period is too short for the tail";
+    if (fitness.smoothing > part * smoothing_max) return "the window is too wide for the loss";
+    if (fitness.fourth > part * fourth_max) return "too few names have a factor of their own";
+    if (fitness.effective_share < part * plan.effective_share / 2.0)
+        return "too few of the points lie in the tail";
+    return {};
+}
+
+// A plan that cures what is wrong with this one; nothing where that would cost too much.
+std::optional<Plan> refined(Plan plan, Fitness const& fitness, std::size_t large) {
+    if (plan.inversion == Inversion::lattice) return std::nullopt;
+    if (fitness.image > 0.5 * image_max) {
+        plan.period *= 1.5;
+        plan.damping = 1.0 / plan.period;
+        plan.nodes = static_cast<std::uint32_t>(1.5 * plan.nodes);
+    } else if (fitness.smoothing > 0.5 * smoothing_max) {
+        plan.width /= 2.0;
+        plan.nodes *= 2;
+    } else if (fitness.fourth > 0.5 * fourth_max) {
+        plan.large_from /= 2.0;
+        large *= 2;
+    } else {
+        return std::nullopt;
+    }
+    if (plan.nodes > nodes_max) return std::nullopt;
+    auto const work = [&] {
+        double points = 0.0;
+        for (auto const& component : plan.mixture) points += component.points;
+        return points * plan.scramblings * plan.nodes * static_cast<double>(large);
     };
-    Quantile result{.value = at(rank)};
-    for (double const steps : {1.0, 2.0, 3.0}) {
-        double const side = std::ceil(steps * deviation);
-        result.error = std::max(result.error, (at(rank + side) - at(rank - side)) / (2.0 * steps));
-    }
-    return result;
+    while (work() > work_max && plan.mixture.back().points > 16)
+        for (auto& component : plan.mixture) component.points /= 2;
+    if (work() > work_max) return std::nullopt;
+    return plan;
 }
 
-// The scenarios of the tail and of the band.
-std::vector<std::uint64_t> choose(std::vector<double> const& losses, double quantile,
-                                  double half_width) {
-    std::vector<std::uint64_t> chosen;
-    std::size_t at_quantile = 0;
-    for (std::uint64_t s = 0; s < losses.size(); ++s) {
-        if (losses[s] < quantile - half_width) continue;
-        if (losses[s] == quantile && ++at_quantile > atom_scenarios_max) continue;
-        chosen.push_back(s);
-    }
-    return chosen;
+template <class Work>
+void each_of(std::size_t count, unsigned threads, Work const& work) {
+    in_blocks(count, names_per_task, threads, [&](std::size_t from, std::size_t to) {
+        for (std::size_t i = from; i < to; ++i) work(i);
+    });
 }
 
-bool in_band(TailSample const& sample, double loss) {
-    return std::abs(loss - sample.quantile) <= sample.half_width;
+// What errors are small or large beside.
+double scale_of(double expected_shortfall, double expected_loss) {
+    return std::max(std::abs(expected_shortfall - expected_loss), 1e-300);
 }
 
-// The names' losses in the chosen scenarios, by name.
-void gather(TailSample& sample, std::vector<std::vector<Simulation::Move>> const& scenarios,
-            std::size_t names) {
-    sample.first.assign(names + 1, 0);
-    for (auto const& moves : scenarios)
-        for (auto const& move : moves) ++sample.first[move.name + 1];
-    std::partial_sum(sample.first.begin(), sample.first.end(), sample.first.begin());
-    sample.losses.resize(sample.first.back());
-    auto next = sample.first;
-    for (std::uint32_t s = 0; s < scenarios.size(); ++s)
-        for (auto const& [name, amount] : scenarios[s]) sample.losses[next[name]++] = {s, amount};
+Fitness fitness_of(LossCurve const& curve, Settings const& settings, double expected_loss) {
+    double const beyond = 1.0 - settings.confidence;
+    double const shortfall = curve.expected_shortfall(settings.confidence);
+    return {.smoothing = curve.smoothing(settings.confidence) / scale_of(shortfall, expected_loss),
+            .image = curve.image_bound() / beyond};
+}
+
+double mean_of(std::span<double const> values) {
+    return std::accumulate(values.begin(), values.end(), 0.0) / static_cast<double>(values.size());
 }
 
 }  // namespace
 
-NameFigures closed_form(Name const& name, Settings const& settings, Migration const& migration) {
-    NameFigures figures;
-    figures.default_probability = migration.default_probability(name.grade);
-    figures.downgrade_probability = migration.downgrade_probability(name.grade);
-    double const exposure = name.exposure_at_default.units();
-    double const lost = name.loss_at_default;
-    if (name.grade == settings.grades.in_default()) {
-        figures.expected_loss = lost;
+double Figures::contribution_error(Contribution kind, std::span<std::uint32_t const> members,
+                                   double share) const {
+    auto const& [sources, of, of_all] = kind == Contribution::var ? var_spread : es_spread;
+    double squares = 0.0;
+    for (std::size_t source = 0; source < sources; ++source) {
+        double sum = -share * of_all[source];
+        for (auto const i : members) sum += of[i * sources + source];
+        squares += sum * sum;
+    }
+    return std::sqrt(squares);
+}
+
+struct Engine::State {
+    std::vector<std::shared_ptr<Name const>> names;
+    std::shared_ptr<Settings const> settings;
+    std::shared_ptr<Cells const> cells;
+    std::vector<Stake> stakes;  // by name
+    std::optional<Transform> transform;
+    Transform::Atoms atoms;
+    std::size_t updates = 0;  // since the transform was built
+};
+
+Engine::Engine(unsigned threads, std::optional<Plan> plan)
+    : threads_{threads}, plan_{std::move(plan)}, state_{std::make_unique<State>()} {}
+Engine::~Engine() = default;
+Engine::Engine(Engine&&) noexcept = default;
+Engine& Engine::operator=(Engine&&) noexcept = default;
+
+Figures Engine::assess(std::span<std::shared_ptr<Name const> const> names,
+                       std::shared_ptr<Settings const> const& settings) {
+    State& state = *state_;
+    bool const updated = update(names, settings);
+
+    Figures figures;
+    figures.names.resize(names.size());
+    each_of(names.size(), threads_, [&](std::size_t i) {
+        figures.names[i] = closed_form(*names[i], *settings, state.cells->migration());
+    });
+    auto& totals = figures.totals;
+    double base = 0.0;
+    for (std::size_t i = 0; i < names.size(); ++i) {
+        bool const lost = names[i]->grade == settings->grades.in_default();
+        (lost ? totals.defaulted_loss : totals.expected_loss) += figures.names[i].expected_loss;
+        base += state.stakes[i].base;
+    }
+    if (std::ranges::none_of(state.stakes, &Stake::takes_part)) {
+        totals.loss_quantile = totals.expected_shortfall = base;
+        for (std::size_t i = 0; i < names.size(); ++i)
+            figures.names[i].es_contribution = state.stakes[i].base;
         return figures;
     }
 
-    double const pd = figures.default_probability.value();
-    double recovery_variance = 0.0;
-    if (double const d = settings.loss_given_default_deviation; d > 0.0 && exposure > 0.0) {
-        double const m = std::clamp(lost / exposure, 0.0, 1.0);
-        double const m0 = settings.loss_given_default.value();
-        recovery_variance = exposure * exposure * m * (1.0 - m) * d * d / (m0 * (1.0 - m0));
+    bool fresh = !plan_;
+    std::string reason;
+    for (;;) {
+        if (!plan_) {
+            plan_ = find_plan(*state.cells, state.stakes, settings->simulation.seed, threads_);
+            if (auto const exact = on_lattice(*plan_, *settings, state.stakes)) plan_ = exact;
+        }
+        if (!updated || fresh || !reason.empty()) rebuild();
+        figures.curve = state.transform->curve(base);
+        state.atoms = state.transform->atoms(figures.curve.quantile(settings->confidence) - base);
+        if (state.atoms.none >= settings->confidence) {
+            fill_at_base(figures, base);
+            break;
+        }
+        auto fitness = fitness_of(figures.curve, *settings, totals.expected_loss);
+        auto wrong = unfit(fitness, *plan_, fresh ? 0.5 : 1.0);
+        std::optional<Plan> better;
+        if (!wrong.empty() && fresh) better = refined(*plan_, fitness, state.transform->large());
+        if (!better && (wrong.empty() || fresh)) {
+            fill(figures, base, fitness);
+            wrong = unfit(fitness, *plan_, fresh ? 0.5 : 1.0);
+            if (wrong.empty()) break;
+            if (fresh) better = refined(*plan_, fitness, state.transform->large());
+            if (fresh && !better) break;
+        }
+        if (fresh) {
+            plan_ = better;
+            continue;
+        }
+        reason = wrong;
+        fresh = true;
+        plan_.reset();
     }
-    if (settings.loss == LossKind::default_only) {
-        figures.expected_loss = pd * lost;
-        figures.standalone_loss_deviation =
-            std::sqrt(pd * (1.0 - pd) * lost * lost + pd * recovery_variance);
-        return figures;
-    }
-
-    auto const grades = settings.grade_values.cols();
-    Eigen::ArrayXd const probability = migration.matrix().row(name.grade.rank);
-    Eigen::ArrayXd loss(grades + 1);
-    loss.head(grades) = exposure * settings.grade_values.row(name.grade.rank).transpose().array();
-    loss[grades] = lost;
-    figures.expected_loss = (probability * loss).sum();
-    figures.standalone_loss_deviation = std::sqrt(
-        (probability * (loss - figures.expected_loss).square()).sum() + pd * recovery_variance);
+    if (plan_->effective_share == 0.0) plan_->effective_share = state.transform->effective_share();
+    figures.plan = *plan_;
+    figures.plan_replaced = std::move(reason);
     return figures;
 }
 
-double Figures::contribution_error(Contribution kind, std::span<std::uint32_t const> members,
-                                   double share) const {
-    double base = 0.0;
-    double at_quantile = 0.0;
-    double slope = 0.0;
-    double largest = 0.0;
-    std::vector<double> loss(sample.total.size(), 0.0);  // the members', a scenario
-    for (std::uint32_t const i : members) {
-        base += sample.base[i];
-        at_quantile += sample.at_quantile[i];
-        slope += sample.slope[i];
-        largest = std::max(largest, sample.largest[i]);
-        for (std::size_t k = sample.first[i]; k < sample.first[i + 1]; ++k)
-            loss[sample.losses[k].scenario] += sample.losses[k].amount;
+// Brings the state to a book. True where the transform was brought there too, by what differs.
+bool Engine::update(std::span<std::shared_ptr<Name const> const> names,
+                    std::shared_ptr<Settings const> const& settings) {
+    State& state = *state_;
+    std::vector<Stake> stakes(names.size());
+    if (state.transform && state.settings == settings && state.updates < updates_max) {
+        // Both are in the order of counterparty_id.
+        std::vector<std::pair<Stake, Stake>> changed;
+        bool known = true;
+        std::size_t old = 0;
+        for (std::size_t i = 0; i < names.size() && known && changed.size() <= changed_max; ++i) {
+            while (old < state.names.size() &&
+                   state.names[old]->counterparty_id < names[i]->counterparty_id)
+                changed.emplace_back(state.stakes[old++], Stake{});
+            bool const was_there = old < state.names.size() &&
+                                   state.names[old]->counterparty_id == names[i]->counterparty_id;
+            if (was_there && state.names[old] == names[i]) {
+                stakes[i] = state.stakes[old++];
+                continue;
+            }
+            auto const stake = state.cells->stake(*names[i]);
+            known = stake.has_value() && state.cells->has_kind(*stake);
+            if (!known) break;
+            stakes[i] = *stake;
+            Stake const before = was_there ? state.stakes[old++] : Stake{};
+            if (before != *stake) changed.emplace_back(before, *stake);
+        }
+        for (; old < state.names.size(); ++old) changed.emplace_back(state.stakes[old], Stake{});
+        if (known && changed.size() <= changed_max) {
+            state.names.assign(names.begin(), names.end());
+            state.stakes = std::move(stakes);
+            state.updates += changed.size();
+            return changed.empty() || state.transform->replace(changed);
+        }
     }
-    for (double& amount : loss) amount += base;
-    double const largest_of_others =
-        members.size() == names.size() ? 0.0 : std::ranges::max(sample.largest);
-    // What one more loss does to (members - rate x all): a member's, or another name's.
-    auto const one_more = [&](double rate) {
-        return std::max(std::abs(1.0 - rate) * largest, std::abs(rate) * largest_of_others);
-    };
-
-    // The band gives the members' part of a loss at the quantile: how it spreads around that part,
-    // and how the part moves with the quantile.
-    double count = 0.0;
-    double spreads = 0.0;
-    double squares = 0.0;
-    for (std::size_t s = 0; s < loss.size(); ++s) {
-        if (!in_band(sample, sample.total[s])) continue;
-        double const spread = loss[s] - at_quantile - slope * (sample.total[s] - sample.quantile);
-        count += 1.0;
-        spreads += spread;
-        squares += spread * spread;
-    }
-    double const band_variance =
-        (std::max(squares - spreads * spreads / count, 0.0) + std::pow(one_more(slope), 2)) /
-        (count * count);
-    double const moved = (slope - share) * sample.quantile_error;
-    if (kind == Contribution::var) return std::sqrt(band_variance + moved * moved);
-
-    // The shortfall's contribution is a mean over all scenarios of what the tail adds to the part
-    // at the quantile, which itself counts for the probability the tail falls short of 1 -
-    // confidence.
-    count = spreads = squares = 0.0;
-    for (std::size_t s = 0; s < loss.size(); ++s) {
-        if (sample.total[s] <= sample.quantile) continue;
-        double const spread = loss[s] - at_quantile - share * (sample.total[s] - sample.quantile);
-        count += 1.0;
-        spreads += spread;
-        squares += spread * spread;
-    }
-    auto const scenarios = static_cast<double>(sample.scenarios);
-    double const tail = 1.0 - sample.confidence;
-    double const mean = spreads / scenarios;
-    double const variance = (squares + std::pow(one_more(share), 2)) / scenarios - mean * mean;
-    double const short_of_tail = 1.0 - count / (scenarios * tail);
-    return std::sqrt(variance / (scenarios * tail * tail) +
-                     short_of_tail * short_of_tail * band_variance);
+    state.names.assign(names.begin(), names.end());
+    state.settings = settings;
+    state.cells = std::make_shared<Cells const>(names, *settings);
+    state.stakes = std::move(stakes);
+    each_of(names.size(), threads_,
+            [&](std::size_t i) { state.stakes[i] = *state.cells->stake(*names[i]); });
+    state.transform.reset();
+    return false;
 }
 
-Figures assess(Book const& book, unsigned threads) {
-    return assess(book.names(), *book.settings(), threads);
+void Engine::rebuild() {
+    State& state = *state_;
+    state.transform.emplace(state.cells, *plan_, threads_);
+    state.transform->build(state.stakes);
+    state.updates = 0;
+}
+
+// Where more than the confidence is on no loss at all, the quantile is that of everybody staying,
+// and whoever loses loses beyond it.
+void Engine::fill_at_base(Figures& figures, double base) {
+    auto const& state = *state_;
+    auto& totals = figures.totals;
+    double const beyond = 1.0 - state.settings->confidence;
+    totals.loss_quantile = base;
+    totals.credit_var = base - totals.expected_loss;
+    totals.expected_shortfall = base + (totals.expected_loss - base) / beyond;
+    for (std::size_t i = 0; i < figures.names.size(); ++i) {
+        if (!state.stakes[i].takes_part) continue;
+        auto& own = figures.names[i];
+        own.var_contribution = state.stakes[i].base - own.expected_loss;
+        own.es_contribution =
+            state.stakes[i].base + (own.expected_loss - state.stakes[i].base) / beyond;
+    }
+}
+
+// What the transform says of the totals and of each name's contributions.
+void Engine::fill(Figures& figures, double base, Fitness& fitness) {
+    State& state = *state_;
+    auto& [names, settings, cells, stakes, transform, atoms, updates] = state;
+    auto& totals = figures.totals;
+    double const confidence = settings->confidence;
+    double const beyond = 1.0 - confidence;
+    LossCurve const& curve = figures.curve;
+
+    double const q = curve.quantile(confidence);
+    double const tail = curve.tail(q);
+    totals.loss_quantile = q;
+    totals.credit_var = q - totals.expected_loss;
+    totals.expected_shortfall = q + curve.excess(q) / beyond;
+
+    // Functionals of the loss at the quantile: the tail above it and the mass at it.
+    Contour const& contour = curve.contour();
+    double const x = q - base;
+    Transform::Target const above{contour.tail(x), contour.tail_image()};
+    Transform::Target const at{contour.density(x), 0.0};
+    auto const density_by_part = curve.functional(at.weights);
+    auto const tail_by_part = curve.tails(q);
+    double const density = mean_of(density_by_part);
+    // Names alone in default are atoms of the loss, between which a quantile cannot lie.
+    double const scale = scale_of(totals.expected_shortfall, totals.expected_loss);
+    double const jump = plan_->unit > 0.0 ? 0.0 : 0.5 * atoms.one / density;
+    // For large names, the window's effect; and where the loss is not smooth beside it, so that
+    // atoms near the quantile are in the tail in part, what it would be with them out or in.
+    bool const smooth = std::max(fitness.smoothing, jump / scale) <= 0.5 * smoothing_max;
+    double const width = smooth ? 0.0 : atom_widths * plan_->width;
+    std::array const beside{Transform::Target{contour.tail(x, wider), contour.tail_image()},
+                            Transform::Target{contour.tail(x - width), contour.tail_image()},
+                            Transform::Target{contour.tail(x + width), contour.tail_image()}};
+    double const tail_before = curve.tail(q - width);
+    double const tail_after = curve.tail(q + width);
+    transform->differentiate({above, at}, beside);
+
+    std::size_t const parts = transform->parts();
+    bool const sampled = curve.is_sampled();
+    std::size_t const sources = (sampled ? parts : 0) + 1;
+    figures.var_spread = {sources, std::vector<float>(names.size() * sources),
+                          std::vector<double>(sources)};
+    figures.es_spread = figures.var_spread;
+    auto const p = static_cast<double>(parts);
+    double const share = 1.0 / std::sqrt(p * (p - 1.0));
+
+    // What cumulants leave out, were the tail exponential: kappa_4 rate^3 / 24.
+    double const rate = density / beyond;
+    std::vector<double> fourth(names.size());
+
+    each_of(names.size(), threads_, [&](std::size_t i) {
+        std::array<double, Transform::targets * 16> room;
+        std::span<double> const values{room.data(), Transform::targets * parts};
+        transform->by_name(stakes[i], values);
+        std::span<double const> const tails = values.first(parts);
+        std::span<double const> const densities = values.last(parts);
+        double const at_quantile = mean_of(densities) / density;
+        double const beyond_quantile = mean_of(tails);
+        auto& own = figures.names[i];
+        own.var_contribution = at_quantile;
+        own.es_contribution = (beyond_quantile + at_quantile * (beyond - tail)) / beyond;
+        float* const var_sources = &figures.var_spread.of[i * sources];
+        float* const es_sources = &figures.es_spread.of[i * sources];
+        if (sampled) {
+            double var_mean = 0.0;
+            double es_mean = 0.0;
+            for (std::size_t r = 0; r < parts; ++r) {
+                // Where the quantile moves, a part of it moves in proportion.
+                double const moved = (tail_by_part[r] - beyond) * at_quantile / x;
+                double const var =
+                    (densities[r] - at_quantile * density_by_part[r] + moved) / density;
+                double const es = (tails[r] - at_quantile * tail_by_part[r]) / beyond;
+                var_sources[r] = static_cast<float>(share * var);
+                es_sources[r] = static_cast<float>(share * es);
+                var_mean += share * var / p;
+                es_mean += share * es / p;
+            }
+            for (std::size_t r = 0; r < parts; ++r) {
+                var_sources[r] -= static_cast<float>(var_mean);
+                es_sources[r] -= static_cast<float>(es_mean);
+            }
+        }
+        if (transform->is_large(stakes[i])) {
+            auto const aside = transform->beside_of(stakes[i]);
+            double const window = (aside[0] - beyond_quantile) / beyond / (wider - 1.0);
+            double const before = (aside[1] + at_quantile * (beyond - tail_before)) / beyond;
+            double const after = (aside[2] + at_quantile * (beyond - tail_after)) / beyond;
+            double const moved = std::max(std::abs(before - own.es_contribution),
+                                          std::abs(after - own.es_contribution));
+            es_sources[sources - 1] = static_cast<float>(
+                std::copysign(std::hypot(window, width > 0.0 ? moved : 0.0), window));
+        } else if (stakes[i].takes_part)
+            fourth[i] = std::pow(stakes[i].largest, 3) * std::abs(own.es_contribution);
+    });
+
+    // Each takes its part of what the sums are off by.
+    auto const settle = [&](double NameFigures::*contribution, double sum) {
+        double total = 0.0;
+        double size = 0.0;
+        for (auto const& name : figures.names) {
+            total += name.*contribution;
+            size += std::abs(name.*contribution);
+        }
+        for (auto& name : figures.names)
+            if (size > 0.0)
+                name.*contribution += (sum - total) * std::abs(name.*contribution) / size;
+        return sum != 0.0 ? (sum - total) / sum : 0.0;
+    };
+    figures.var_residual = settle(&NameFigures::var_contribution, x);
+    figures.es_residual = settle(&NameFigures::es_contribution, totals.expected_shortfall - base);
+
+    fitness.fourth =
+        std::accumulate(fourth.begin(), fourth.end(), 0.0) * std::pow(rate, 3) / 24.0 / scale;
+    fitness.effective_share = transform->effective_share();
+
+    double const left_out = fitness.fourth * scale;
+    totals.loss_quantile_error = std::hypot(curve.quantile_error(confidence), left_out, jump);
+    totals.credit_var_error = totals.loss_quantile_error;
+    totals.expected_shortfall_error = std::hypot(curve.shortfall_error(confidence), left_out);
+
+    // The last source of error is the method's own: the window, what cumulants leave out, and the
+    // part of what the sums missed. Only the window's effect on large names is known by name.
+    double const es_window = (curve.excess(q, wider) - curve.excess(q)) / beyond / (wider - 1.0);
+    double const es_move = std::max(std::abs(totals.expected_shortfall - base), 1e-300);
+    double const var_move = std::max(std::abs(x), 1e-300);
+    double const es_common = std::hypot(left_out / es_move, figures.es_residual);
+    double const es_method = std::hypot(es_common, es_window / es_move);
+    double const var_method =
+        std::hypot(left_out / var_move, fitness.smoothing * scale / var_move, figures.var_residual);
+    for (std::size_t i = 0; i < names.size(); ++i) {
+        auto& own = figures.names[i];
+        float* const var_sources = &figures.var_spread.of[i * sources];
+        float* const es_sources = &figures.es_spread.of[i * sources];
+        var_sources[sources - 1] = static_cast<float>(var_method * own.var_contribution);
+        float& es_own = es_sources[sources - 1];
+        es_own = static_cast<float>(
+            transform->is_large(stakes[i])
+                ? std::copysign(std::hypot(es_own, es_common * own.es_contribution), es_own)
+                : es_method * own.es_contribution);
+        double var_squares = 0.0;
+        double es_squares = 0.0;
+        for (std::size_t r = 0; r < sources; ++r) {
+            figures.var_spread.of_all[r] += var_sources[r];
+            figures.es_spread.of_all[r] += es_sources[r];
+            var_squares += double{var_sources[r]} * var_sources[r];
+            es_squares += double{es_sources[r]} * es_sources[r];
+        }
+        own.var_contribution_error = std::sqrt(var_squares);
+        own.es_contribution_error = std::sqrt(es_squares);
+        own.es_contribution += stakes[i].base;
+        if (names[i]->grade != settings->grades.in_default())
+            own.var_contribution += stakes[i].base - own.expected_loss;
+    }
 }
 
 Figures assess(std::span<std::shared_ptr<Name const> const> names, Settings const& settings,
                unsigned threads) {
-    Migration const migration{settings};
-    Simulation const simulation{names, settings, migration};
-    auto const losses = simulation.losses(0, settings.simulation.scenarios, threads);
-
-    Figures figures;
-    auto& [totals, measures, plan, sample] = figures;
-    std::vector<double> expected(names.size(), 0.0);  // of the loss the simulation draws
-    for (std::size_t i = 0; i < names.size(); ++i) {
-        measures.push_back(closed_form(*names[i], settings, migration));
-        if (names[i]->grade == settings.grades.in_default()) {
-            totals.defaulted_loss += measures[i].expected_loss;
-        } else {
-            expected[i] = measures[i].expected_loss;
-            totals.expected_loss += expected[i];
-        }
-    }
-
-    sample.base = simulation.base();
-    sample.largest = simulation.largest();
-    sample.scenarios = settings.simulation.scenarios;
-    sample.confidence = settings.confidence;
-    double const base = sum(sample.base);
-    Quantile const found = quantile(losses, settings.confidence, base + sum(sample.largest));
-    sample.quantile = found.value;
-    sample.quantile_error = found.error;
-    totals.loss_quantile = found.value;
-    totals.loss_quantile_error = found.error;
-    totals.credit_var = found.value - totals.expected_loss;
-    totals.credit_var_error = found.error;
-
-    // Contributions to the quantile are means over the atom at it, or over a band of losses around
-    // it: 1% of the quantile to either side. Where staying has a value too, what counts is the
-    // quantile's distance from the loss if nobody moves, or from the expected loss where that is
-    // further. What the band's mean loss is off by goes to the names in proportion to their own
-    // distance, so that the sum is exact.
-    bool const from_base = std::abs(found.value - base) >= std::abs(totals.credit_var);
-    double const distance = from_base ? found.value - base : totals.credit_var;
-    std::vector<double> const& origin = from_base ? sample.base : expected;
-    auto const atom = static_cast<std::size_t>(std::ranges::count(losses, found.value));
-    if (atom < atom_scenarios_min) sample.half_width = plan.band * std::abs(distance);
-
-    auto const chosen = choose(losses, sample.quantile, sample.half_width);
-    for (std::uint64_t const s : chosen) sample.total.push_back(losses[s]);
-    gather(sample, simulation.moves(chosen, threads), names.size());
-
-    double band_count = 0.0;
-    double band_loss = 0.0;
-    double tail_count = 0.0;
-    double excess = 0.0;  // of the tail's losses over the quantile
-    for (double const loss : sample.total) {
-        if (in_band(sample, loss)) {
-            band_count += 1.0;
-            band_loss += loss;
-        }
-        if (loss > found.value) {
-            tail_count += 1.0;
-            excess += loss - found.value;
-        }
-    }
-    double const tail = static_cast<double>(sample.scenarios) * (1.0 - settings.confidence);
-    totals.expected_shortfall = found.value + excess / tail;
-    plan.simulation = settings.simulation;
-    plan.band_scenarios = static_cast<std::uint64_t>(band_count);
-    if (distance != 0.0)
-        plan.band_scale = distance / (band_loss / band_count - (found.value - distance));
-
-    sample.at_quantile.resize(names.size());
-    sample.slope.resize(names.size());
-    double var_sum = 0.0;
-    double es_sum = 0.0;
-    for (std::size_t i = 0; i < names.size(); ++i) {
-        double band_moves = 0.0;
-        double tail_moves = 0.0;
-        for (std::size_t k = sample.first[i]; k < sample.first[i + 1]; ++k) {
-            auto const& [s, amount] = sample.losses[k];
-            if (in_band(sample, sample.total[s])) band_moves += amount;
-            if (sample.total[s] > found.value) tail_moves += amount;
-        }
-        double const own_distance =
-            plan.band_scale * (sample.base[i] + band_moves / band_count - origin[i]);
-        double const at_quantile = origin[i] + own_distance;
-        sample.at_quantile[i] = at_quantile;
-        if (distance != 0.0) sample.slope[i] = own_distance / distance;
-        measures[i].var_contribution = at_quantile - expected[i];
-        measures[i].es_contribution =
-            at_quantile + (tail_moves + tail_count * (sample.base[i] - at_quantile)) / tail;
-        var_sum += measures[i].var_contribution;
-        es_sum += measures[i].es_contribution;
-    }
-    double const rounding = 1e-9 * (std::abs(base) + sum(sample.largest));
-    ensure(std::abs(var_sum - totals.credit_var) <= rounding,
-           "contributions do not sum to credit VaR");
-    ensure(std::abs(es_sum - totals.expected_shortfall) <= rounding,
-           "contributions do not sum to expected shortfall");
-
-    std::vector<std::uint32_t> everyone(names.size());
-    std::iota(everyone.begin(), everyone.end(), 0U);
-    totals.expected_shortfall_error = figures.contribution_error(Contribution::es, everyone, 0.0);
-    for (std::uint32_t const i : everyone) {
-        std::span const one{&i, 1};
-        measures[i].var_contribution_error =
-            figures.contribution_error(Contribution::var, one, 0.0);
-        measures[i].es_contribution_error = figures.contribution_error(Contribution::es, one, 0.0);
-    }
-    return figures;
+    // The settings outlive the engine.
+    std::shared_ptr<Settings const> const borrowed{std::shared_ptr<void>{}, &settings};
+    return Engine{threads}.assess(names, borrowed);
 }
 
 }  // namespace model

@@ -1,14 +1,13 @@
 #include "model/simulation.hpp"
 
+#include "model/parallel.hpp"
+
 #include <Random123/philox.h>
+#include <boost/math/special_functions/beta.hpp>
 #include <boost/random/exponential_distribution.hpp>
 #include <boost/random/gamma_distribution.hpp>
 #include <boost/random/normal_distribution.hpp>
 #include <boost/random/uniform_01.hpp>
-#include <oneapi/tbb/blocked_range.h>
-#include <oneapi/tbb/global_control.h>
-#include <oneapi/tbb/parallel_for.h>
-#include <oneapi/tbb/task_arena.h>
 
 #include <algorithm>
 #include <cmath>
@@ -41,33 +40,31 @@ double lower_edge(std::size_t bin) {
 
 constexpr std::uint32_t none = std::numeric_limits<std::uint32_t>::max();
 
-// The first element of an ascending, not empty range that is above x, which its last is. Without a
-// branch to mispredict, unlike std::upper_bound.
-std::size_t first_beyond(std::vector<double> const& ascending, double x) {
-    double const* begin = ascending.data();
-    std::size_t left = ascending.size();
-    while (left > 1) {
-        std::size_t const half = left / 2;
-        begin += half & -static_cast<std::size_t>(begin[half - 1] <= x);
-        left -= half;
-    }
-    return static_cast<std::size_t>(begin - ascending.data());
-}
-
-// Calls `work(from, to)` for the blocks that [0, count) falls into.
-template <class Work>
-void in_blocks(std::size_t count, unsigned threads, Work const& work) {
-    auto const allowed =
-        tbb::global_control::active_value(tbb::global_control::max_allowed_parallelism);
-    auto const used = threads == 0 ? allowed : std::min<std::size_t>(threads, allowed);
-    tbb::task_arena arena{static_cast<int>(used)};
-    arena.execute([&] {
-        tbb::parallel_for(tbb::blocked_range<std::size_t>{0, count, scenarios_per_block},
-                          [&](auto const& block) { work(block.begin(), block.end()); });
-    });
-}
-
 }  // namespace
+
+FactorLaw::FactorLaw(Eigen::MatrixXd means, std::vector<int> const& sixteenths)
+    : means_{std::move(means)},
+      shares_{means_.cols()},
+      half_squares_{0.5 * means_.colwise().squaredNorm().transpose()} {
+    std::size_t stratum = 0;
+    for (std::size_t k = 0; k < sixteenths.size(); ++k) {
+        shares_[static_cast<Eigen::Index>(k)] = sixteenths[k] / double{strata};
+        for (int i = 0; i < sixteenths[k]; ++i)
+            component_.at(stratum++) = static_cast<std::uint8_t>(k);
+    }
+}
+
+void FactorLaw::shift(Eigen::VectorXd& factors, std::uint64_t scenario) const {
+    if (!plain()) factors += means_.col(component_[scenario % strata]);
+}
+
+double FactorLaw::weight(Eigen::VectorXd const& factors) const {
+    if (plain()) return 1.0;
+    double ratio = 0.0;  // g / phi
+    for (Eigen::Index k = 0; k < means_.cols(); ++k)
+        ratio += shares_[k] * std::exp(means_.col(k).dot(factors) - half_squares_[k]);
+    return 1.0 / ratio;
+}
 
 // The random numbers of one scenario, in the order they are asked for: a uniform random bit
 // generator, and the distributions drawn from it.
@@ -118,10 +115,12 @@ private:
 };
 
 Simulation::Simulation(std::span<std::shared_ptr<Name const> const> names, Settings const& settings,
-                       Migration const& migration)
+                       Migration const& migration, std::uint64_t seed)
     : settings_{settings},
       migration_{migration},
+      seed_{seed},
       factor_{factor(settings.indices.correlation)},
+      cell_of_(names.size(), none),
       stakes_(names.size()),
       base_(names.size()),
       largest_(names.size()) {
@@ -167,6 +166,8 @@ Simulation::Simulation(std::span<std::shared_ptr<Name const> const> names, Setti
                           .kind = kind_at->second,
                           .first_member = static_cast<std::uint32_t>(members_.size()),
                           .members = static_cast<std::uint32_t>(those.size())});
+        for (std::uint32_t const i : those)
+            cell_of_[i] = static_cast<std::uint32_t>(cells_.size()) - 1;
         members_.insert(members_.end(), those.begin(), those.end());
     }
 
@@ -242,32 +243,49 @@ double Simulation::hazard(Kind const& kind, double index_down, double index_up) 
     return stay > 0.0 ? std::min(-std::log(stay), hazard_max) : hazard_max;
 }
 
-std::size_t Simulation::state_after(Kind const& kind, double index, Stream& stream) const {
-    std::size_t const grades = settings_.grades.size();
-    if (settings_.loss == LossKind::default_only) return grades;
-
-    auto const& cuts = migration_.thresholds(Grade{kind.grade});  // worst state first
-    double const rho = kind.asset_correlation;
-    double const down = probability_below(kind.cut_down, rho, index);
-    double const up = probability_below(-kind.cut_up, rho, -index);
-    double const place = stream.uniform() * (down + up);
-    std::size_t state = kind.grade;
-    if (place < down || up == 0.0) {
-        do ++state;
-        while (state < grades && place < probability_below(cuts[grades - 1 - state], rho, index));
-    } else {
-        do --state;
-        while (state > 0 && place - down < probability_below(-cuts[grades - state], rho, -index));
-    }
-    return state;
+double Simulation::index_of(Blend const& blend, Eigen::VectorXd const& indices) {
+    return std::clamp(
+        blend.first_weight * indices[blend.first] + blend.second_weight * indices[blend.second],
+        -index_max, index_max);
 }
 
-double Simulation::steps_of_move(std::uint32_t name, Kind const& kind, double index,
+void Simulation::find_ways(Kind const& kind, double index, Ways& ways) const {
+    if (settings_.loss == LossKind::default_only) return;
+    ways.index = index;
+    ways.down = probability_below(kind.cut_down, kind.asset_correlation, index);
+    ways.up = probability_below(-kind.cut_up, kind.asset_correlation, -index);
+    std::ranges::fill(ways.further, -1.0);
+}
+
+double Simulation::further(Kind const& kind, std::size_t state, Ways& ways) const {
+    double& probability = ways.further[state];
+    if (probability >= 0.0) return probability;
+    auto const& cuts = migration_.thresholds(Grade{kind.grade});  // worst state first
+    std::size_t const grades = settings_.grades.size();
+    double const rho = kind.asset_correlation;
+    return probability = state > kind.grade
+                             ? probability_below(cuts[grades - 1 - state], rho, ways.index)
+                             : probability_below(-cuts[grades - state], rho, -ways.index);
+}
+
+double Simulation::steps_of_move(std::uint32_t name, Kind const& kind, Ways& ways,
                                  Stream& stream) const {
     auto const& [exposure, loss, steps_on_default] = stakes_[name];
     if (one_amount_) return steps_on_default;
-    std::size_t const state = state_after(kind, index, stream);
-    if (state < settings_.grades.size()) {
+    std::size_t const grades = settings_.grades.size();
+    std::size_t state = grades;
+    if (settings_.loss == LossKind::revaluation) {
+        double const place = stream.uniform() * (ways.down + ways.up);
+        state = kind.grade;
+        if (place < ways.down || ways.up == 0.0) {
+            do ++state;
+            while (state < grades && place < further(kind, state, ways));
+        } else {
+            do --state;
+            while (state > 0 && place - ways.down < further(kind, state, ways));
+        }
+    }
+    if (state < grades) {
         double const value = settings_.grade_values(kind.grade, static_cast<Eigen::Index>(state));
         return steps(exposure * value) - steps(base_[name]);
     }
@@ -282,83 +300,150 @@ Simulation::Scratch Simulation::scratch() const {
             .indices = Eigen::VectorXd(factor_.rows()),
             .index = std::vector<double>(blends_.size()),
             .row = std::vector<std::size_t>(blends_.size()),
-            .ends = std::vector<double>(cells_.size()),
-            .points = {}};
+            .ways = {.further = std::vector<double>(settings_.grades.size())}};
 }
 
-// Tells `visit` each name that moves, and the steps its loss moves by.
-template <class Visit>
-void Simulation::run(std::uint64_t scenario, Scratch& scratch, Visit const& visit) const {
-    auto& [factors, indices, index, row, ends, points] = scratch;
-    Stream stream{settings_.simulation.seed, scenario};
+void Simulation::draw_factors(FactorLaw const& law, std::uint64_t scenario, Stream& stream,
+                              Eigen::VectorXd& factors) {
     for (double& factor : factors) factor = stream.normal();
+    law.shift(factors, scenario);
+}
+
+// Tells `on_move` each name that moves, and the steps its loss moves by.
+template <class OnMove>
+void Simulation::run(FactorLaw const& law, std::uint64_t scenario, Scratch& scratch,
+                     OnMove const& on_move) const {
+    auto& [factors, indices, index, row, ways] = scratch;
+    Stream stream{seed_, scenario};
+    draw_factors(law, scenario, stream, factors);
     indices.noalias() = factor_ * factors;
     for (std::size_t b = 0; b < blends_.size(); ++b) {
-        auto const& [first, second, first_weight, second_weight] = blends_[b];
-        index[b] = std::clamp(first_weight * indices[first] + second_weight * indices[second],
-                              -index_max, index_max);
+        index[b] = index_of(blends_[b], indices);
         row[b] = bin_of(index[b]) * kinds_.size();
     }
 
-    double end = 0.0;
-    for (std::size_t c = 0; c < cells_.size(); ++c) {
-        Cell const& cell = cells_[c];
-        end += cell.members * hazard_above_[row[cell.blend] + cell.kind];
-        ends[c] = end;
-    }
-
-    // In three goes, so that searches overlap in the processor: where the points fall, in which
-    // cells, on whom.
-    points.clear();
-    double next = stream.exponential();
-    while (next < end) {
-        points.push_back({.place = next});
-        next += stream.exponential();
-    }
-    for (Point& point : points) point.cell = first_beyond(ends, point.place);
-
     std::uint32_t moved = none;
-    for (auto const& [place, c] : points) {
-        auto const& [blend, kind, first_member, members] = cells_[c];
+    double gap = stream.exponential();  // from where the cell begins to the next point
+    for (auto const& [blend, kind, first_member, members] : cells_) {
         double const length = hazard_above_[row[blend] + kind];
-        double const in_cell = std::max(place - (ends[c] - members * length), 0.0);
-        auto const member = std::min(static_cast<std::uint32_t>(in_cell / length), members - 1);
-        double const in_name = in_cell - member * length;
-        std::uint32_t const name = members_[first_member + member];
-        if (name == moved) continue;
-        if (in_name >= hazard_below_[row[blend] + kind] &&
-            in_name >= hazard(kinds_[kind], index[blend], index[blend]))
-            continue;
-        moved = name;
-        visit(name, steps_of_move(name, kinds_[kind], index[blend], stream));
+        double const end = members * length;
+        if (gap < end) {
+            double const surely_hit = hazard_below_[row[blend] + kind];
+            find_ways(kinds_[kind], index[blend], ways);
+            do {
+                auto const member = std::min(static_cast<std::uint32_t>(gap / length), members - 1);
+                double const in_name = gap - member * length;
+                std::uint32_t const name = members_[first_member + member];
+                gap += stream.exponential();
+                if (name == moved) continue;
+                if (in_name >= surely_hit &&
+                    in_name >= hazard(kinds_[kind], index[blend], index[blend]))
+                    continue;
+                moved = name;
+                on_move(name, steps_of_move(name, kinds_[kind], ways, stream));
+            } while (gap < end);
+        }
+        gap -= end;
     }
 }
 
-std::vector<double> Simulation::losses(std::uint64_t first, std::size_t count,
-                                       unsigned threads) const {
-    std::vector<double> result(count);
-    in_blocks(count, threads, [&](std::size_t from, std::size_t to) {
+Simulation::Sample Simulation::sample(FactorLaw const& law, std::uint64_t first, std::size_t count,
+                                      unsigned threads) const {
+    Sample result;
+    result.loss.resize(count);
+    if (!law.plain()) result.weight.resize(count);
+    in_blocks(count, scenarios_per_block, threads, [&](std::size_t from, std::size_t to) {
         Scratch room = scratch();
         for (std::size_t s = from; s < to; ++s) {
             double steps = base_steps_;
-            run(first + s, room, [&steps](std::uint32_t, double moved) { steps += moved; });
-            result[s] = steps / steps_per_unit_;
+            run(law, first + s, room, [&steps](std::uint32_t, double moved) { steps += moved; });
+            result.loss[s] = steps / steps_per_unit_;
+            if (!law.plain()) result.weight[s] = law.weight(room.factors);
         }
     });
     return result;
 }
 
+void Simulation::visit(FactorLaw const& law, std::span<std::uint64_t const> scenarios,
+                       Visit const& visit) const {
+    Scratch room = scratch();
+    std::vector<Move> moves;
+    for (std::size_t k = 0; k < scenarios.size(); ++k) {
+        moves.clear();
+        run(law, scenarios[k], room, [&](std::uint32_t name, double moved) {
+            moves.push_back({name, moved / steps_per_unit_});
+        });
+        visit(k, moves, room.indices);
+    }
+}
+
 std::vector<std::vector<Simulation::Move>> Simulation::moves(
     std::span<std::uint64_t const> scenarios, unsigned threads) const {
     std::vector<std::vector<Move>> result(scenarios.size());
-    in_blocks(scenarios.size(), threads, [&](std::size_t from, std::size_t to) {
-        Scratch room = scratch();
-        for (std::size_t s = from; s < to; ++s)
-            run(scenarios[s], room, [&](std::uint32_t name, double moved) {
-                result[s].push_back({name, moved / steps_per_unit_});
-            });
-    });
+    in_blocks(scenarios.size(), scenarios_per_block, threads,
+              [&](std::size_t from, std::size_t to) {
+                  visit({}, scenarios.subspan(from, to - from),
+                        [&](std::size_t k, std::span<Move const> moves, Eigen::VectorXd const&) {
+                            result[from + k].assign(moves.begin(), moves.end());
+                        });
+              });
     return result;
+}
+
+double Simulation::expected_move(std::uint32_t name, Eigen::VectorXd const& indices, double low,
+                                 double high) const {
+    if (cell_of_[name] == none || low > largest_[name] || high < -largest_[name]) return 0.0;
+    auto const& [exposure, loss, steps_on_default] = stakes_[name];
+    Cell const& cell = cells_[cell_of_[name]];
+    Kind const& kind = kinds_[cell.kind];
+    double const index = index_of(blends_[cell.blend], indices);
+    double const rho = kind.asset_correlation;
+    auto const& cuts = migration_.thresholds(Grade{kind.grade});  // worst state first
+    auto const between = [&](double amount) {
+        return low <= amount && amount <= high ? amount : 0.0;
+    };
+
+    double const p = probability_below(cuts.front(), rho, index);
+    double expected = 0.0;
+    if (precision_ > 0.0 && loss > 0.0 && loss < exposure) {
+        double const mean = loss / exposure;
+        double const a = mean * precision_;
+        double const b = (1.0 - mean) * precision_;
+        double const from = std::clamp((low + base_[name]) / exposure, 0.0, 1.0);
+        double const to = std::clamp((high + base_[name]) / exposure, 0.0, 1.0);
+        // E[x; x <= c] of a beta variable x is its mean times I_c(a + 1, b).
+        if (from < to)
+            expected =
+                p * (loss * (boost::math::ibeta(a + 1.0, b, to) -
+                             boost::math::ibeta(a + 1.0, b, from)) -
+                     base_[name] * (boost::math::ibeta(a, b, to) - boost::math::ibeta(a, b, from)));
+    } else {
+        expected = p * between(loss - base_[name]);
+    }
+    if (settings_.loss == LossKind::default_only) return expected;
+
+    std::size_t const grades = settings_.grades.size();
+    for (std::size_t state = 0; state < grades; ++state) {
+        if (state == kind.grade) continue;
+        double const value = settings_.grade_values(kind.grade, static_cast<Eigen::Index>(state));
+        double const amount = between(exposure * value - base_[name]);
+        if (amount == 0.0) continue;
+        double const lower = cuts[grades - 1 - state];
+        double const upper = state == 0 ? infinity : cuts[grades - state];
+        expected +=
+            amount *
+            (state > kind.grade
+                 ? probability_below(upper, rho, index) - probability_below(lower, rho, index)
+                 : probability_below(-lower, rho, -index) - probability_below(-upper, rho, -index));
+    }
+    return expected;
+}
+
+Eigen::VectorXd Simulation::factors(FactorLaw const& law, std::uint64_t scenario) const {
+    Stream stream{seed_, scenario};
+    Eigen::VectorXd factors(factor_.cols());
+    draw_factors(law, scenario, stream, factors);
+    return factors;
 }
 
 }  // namespace model

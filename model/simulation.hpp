@@ -6,6 +6,8 @@
 
 #include <Eigen/Core>
 
+#include <array>
+#include <cstddef>
 #include <cstdint>
 #include <memory>
 #include <span>
@@ -13,7 +15,41 @@
 
 namespace model {
 
-// The judge: plain simulation of the book, name by name, exact but for rounding.
+// The law that the systematic factors Z are drawn from, and what a scenario so drawn counts for.
+//
+//     g(z) = sum over k of share_k phi(z - m_k)      phi: standard normal density, unit variances
+//     w(z) = phi(z) / g(z)                           in (0, 1 / share of the component at 0]
+//
+// Without means it is plain: g = phi, w = 1. Else the first component stands at 0, which bounds the
+// weights. Scenario s comes from the component of stratum s mod 16, so that shares are sixteenths,
+// met exactly by every sixteen scenarios; it is weighed by the whole mixture, whichever component
+// it came from: the balance heuristic (Owen & Zhou, 2000, Safe and effective importance sampling,
+// Journal of the American Statistical Association 95).
+class FactorLaw {
+public:
+    static constexpr int strata = 16;
+
+    FactorLaw() = default;
+    // means: factors x components, the first column 0; sixteenths: a component's, each positive,
+    // together 16.
+    FactorLaw(Eigen::MatrixXd means, std::vector<int> const& sixteenths);
+
+    [[nodiscard]] bool plain() const { return means_.cols() == 0; }
+    [[nodiscard]] Eigen::MatrixXd const& means() const { return means_; }
+    [[nodiscard]] Eigen::VectorXd const& shares() const { return shares_; }
+
+    // Moves standard normal factors to where scenario `scenario` is drawn from.
+    void shift(Eigen::VectorXd& factors, std::uint64_t scenario) const;
+    [[nodiscard]] double weight(Eigen::VectorXd const& factors) const;
+
+private:
+    Eigen::MatrixXd means_;
+    Eigen::VectorXd shares_;
+    Eigen::VectorXd half_squares_;  // |m_k|^2 / 2
+    std::array<std::uint8_t, strata> component_{};
+};
+
+// Simulation of the book, name by name, exact but for rounding.
 //
 // A scenario draws the systematic indices; given them, names leave their grade independently, names
 // of one cell (grade, asset correlation, indices) with one probability p. Drawing the few that
@@ -34,9 +70,12 @@ namespace model {
 class Simulation {
 public:
     // `names` as Book::names(). Those in default, and those that can lose nothing, take no part.
-    // Settings and migration must live as long.
+    // Settings and migration must live as long. The seed is that of the settings unless given.
     Simulation(std::span<std::shared_ptr<Name const> const> names, Settings const& settings,
-               Migration const& migration);
+               Migration const& migration, std::uint64_t seed);
+    Simulation(std::span<std::shared_ptr<Name const> const> names, Settings const& settings,
+               Migration const& migration)
+        : Simulation{names, settings, migration, settings.simulation.seed} {}
 
     // A name that left its grade, and its loss beyond that of staying.
     struct Move {
@@ -44,14 +83,39 @@ public:
         double amount;       // base currency
     };
 
-    // The book's loss in the scenarios first, first + 1, ... first + count - 1. `threads` 0: all
-    // cores.
-    [[nodiscard]] std::vector<double> losses(std::uint64_t first, std::size_t count,
-                                             unsigned threads) const;
+    // By scenario: the book's loss, and the scenario's weight (none where the law is plain).
+    struct Sample {
+        std::vector<double> loss;
+        std::vector<double> weight;
+    };
 
-    // The names that move in each of the given scenarios, each once.
+    // The scenarios first, first + 1, ... first + count - 1. `threads` 0: all cores.
+    [[nodiscard]] Sample sample(FactorLaw const& law, std::uint64_t first, std::size_t count,
+                                unsigned threads) const;
+    [[nodiscard]] std::vector<double> losses(std::uint64_t first, std::size_t count,
+                                             unsigned threads) const {
+        return sample({}, first, count, threads).loss;
+    }
+
+    // Draws the given scenarios again, one after the other, and tells visit(k, moves, indices) the
+    // names that move in the k-th of them, each once, and the systematic indices.
+    using Visit =
+        std::function<void(std::size_t, std::span<Move const>, Eigen::VectorXd const& indices)>;
+    void visit(FactorLaw const& law, std::span<std::uint64_t const> scenarios,
+               Visit const& visit) const;
     [[nodiscard]] std::vector<std::vector<Move>> moves(std::span<std::uint64_t const> scenarios,
                                                        unsigned threads) const;
+
+    // The systematic factors of a scenario.
+    [[nodiscard]] Eigen::VectorXd factors(FactorLaw const& law, std::uint64_t scenario) const;
+
+    // What a name's move can be expected to add once the indices are known, moves of other amounts
+    // counted as nothing: E[amount; low <= amount <= high | indices].
+    [[nodiscard]] double expected_move(std::uint32_t name, Eigen::VectorXd const& indices,
+                                       double low, double high) const;
+
+    // What losses are whole multiples of, but for rounding.
+    [[nodiscard]] double step() const { return 1.0 / steps_per_unit_; }
 
     // By name: the loss in a scenario in which it stays, and the largest |amount| of a move.
     [[nodiscard]] std::vector<double> const& base() const { return base_; }
@@ -78,10 +142,13 @@ private:
         double loss_at_default = 0.0;
         double steps_on_default = 0.0;
     };
-    // On the line the names are laid out on.
-    struct Point {
-        double place = 0.0;
-        std::size_t cell = 0;
+    // Where the names of a cell that leave their grade go, once the index is known; worked out as
+    // far as it is asked for, and then for all of them.
+    struct Ways {
+        double index = 0.0;
+        double down = 0.0;  // probabilities of leaving in each direction
+        double up = 0.0;
+        std::vector<double> further;  // by state: of going beyond it; below 0: not asked for yet
     };
     // Room for one scenario, reused by the next.
     struct Scratch {
@@ -89,8 +156,7 @@ private:
         Eigen::VectorXd indices;
         std::vector<double> index;     // by blend
         std::vector<std::size_t> row;  // by blend: of the bounds
-        std::vector<double> ends;      // by cell: where it ends on the line
-        std::vector<Point> points;
+        Ways ways;
     };
     class Stream;
 
@@ -101,17 +167,23 @@ private:
     // The hazard of leaving once the index is known: one index for moves down and one for moves up,
     // which differ only to bound it.
     [[nodiscard]] static double hazard(Kind const& kind, double index_down, double index_up);
-    // The state of a name that leaves its grade, and the steps its loss then moves by.
-    [[nodiscard]] std::size_t state_after(Kind const& kind, double index, Stream& stream) const;
-    [[nodiscard]] double steps_of_move(std::uint32_t name, Kind const& kind, double index,
+    [[nodiscard]] static double index_of(Blend const& blend, Eigen::VectorXd const& indices);
+    void find_ways(Kind const& kind, double index, Ways& ways) const;
+    [[nodiscard]] double further(Kind const& kind, std::size_t state, Ways& ways) const;
+    // The steps the loss of a name moves by that leaves its grade.
+    [[nodiscard]] double steps_of_move(std::uint32_t name, Kind const& kind, Ways& ways,
                                        Stream& stream) const;
 
     [[nodiscard]] Scratch scratch() const;
-    template <class Visit>
-    void run(std::uint64_t scenario, Scratch& scratch, Visit const& visit) const;
+    static void draw_factors(FactorLaw const& law, std::uint64_t scenario, Stream& stream,
+                             Eigen::VectorXd& factors);
+    template <class OnMove>
+    void run(FactorLaw const& law, std::uint64_t scenario, Scratch& scratch,
+             OnMove const& on_move) const;
 
     Settings const& settings_;
     Migration const& migration_;
+    std::uint64_t seed_;
     Eigen::MatrixXd factor_;
     std::vector<Kind> kinds_;
     std::vector<double> hazard_above_;  // bins of the index x kinds: bounds of the hazard wherever
@@ -119,6 +191,7 @@ private:
     std::vector<Blend> blends_;
     std::vector<Cell> cells_;
     std::vector<std::uint32_t> members_;  // names, by cell
+    std::vector<std::uint32_t> cell_of_;  // by name; `none` for those that take no part
     std::vector<Stake> stakes_;           // by name
     std::vector<double> base_;
     std::vector<double> largest_;

@@ -77,7 +77,7 @@ commit() {
     started=$(date +%s%N)
     sql "$statement"
     wait_until "NOT EXISTS (SELECT FROM loadline.change_log)
-        AND EXISTS (SELECT FROM loadline.assessment WHERE sequence > $before)" 'An assessment of the change'
+        AND EXISTS (SELECT FROM loadline.assessment WHERE sequence > $before AND scope = 'whole')" 'An assessment of the change'
     printf '          assessed %d ms after the commit began\n' $((($(date +%s%N) - started) / 1000000))
     commits=$((commits + 1))
     show_events

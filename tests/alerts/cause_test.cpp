@@ -33,17 +33,17 @@ protected:
         Limits limits;
         std::shared_ptr<model::Settings const> settings;
         model::Book book;
-        model::Figures figures;
+        std::vector<model::NameFigures> figures;
 
         Stage stage() {
             model::Book::Changes changes{.whole = true, .counterparties = inputs, .shared = shared};
             book.apply(std::move(changes), settings, now);
             model::Migration const migration{*settings};
-            figures.names.clear();
+            figures.clear();
             for (auto const& name : book.names()) {
                 auto own = model::closed_form(*name, *settings, migration);
                 own.es_contribution = es_per_loss * name->loss_at_default;
-                figures.names.push_back(own);
+                figures.push_back(own);
             }
             return {book, figures, limits};
         }

@@ -3,7 +3,10 @@
 #include <gmock/gmock.h>
 #include <gtest/gtest.h>
 
+#include <algorithm>
+#include <map>
 #include <memory>
+#include <random>
 
 namespace alerts {
 namespace {
@@ -287,6 +290,130 @@ TEST_F(Checked, AnUncertainFigureNearItsLevelIsAtLevel) {
     EXPECT_EQ(seen.standing(), Standing::within);
     seen.warning_level = 90.0;
     EXPECT_EQ(seen.standing(), Standing::at_level);
+}
+
+// What a touched turn looks at is enough: taken into what was known, it is what a look at
+// everything gives. Books are made at random, and moved at random a few names at a time.
+TEST(Reach, FindsAllThatAFewMovedNamesMove) {
+    model::Settings settings;
+    settings.base_currency = "EUR";
+    settings.grades = model::GradeScale{{"G1", "G2", "G3"}};
+    model::Shared shared;
+    shared.capital["tier1"] = {{today - std::chrono::days{9}, 1000.0}};
+    LevelRule const by_grade{.by = SubjectKind::grade,
+                             .levels = {{"G1", euros(60)}, {"G2", euros(30)}},
+                             .others = euros(9)};
+    Limits limits;
+    auto const add = [&](SubjectKind per, Measure measure, LevelRule level) -> Limit& {
+        auto& limit = limits.emplace_back();
+        limit.limit_id = "L" + std::to_string(9 - limits.size());
+        limit.per = per;
+        limit.measure = measure;
+        limit.breach_at = std::move(level);
+        return limit;
+    };
+    auto const one = [](Level level) {
+        return LevelRule{.by = {}, .levels = {{"", level}}, .others = {}};
+    };
+    add(SubjectKind::group_or_name, Measure::exposure, one(ShareOf{0.05, Total::tier1}));
+    add(SubjectKind::name, Measure::exposure, by_grade).where = {
+        {SubjectKind::sector, {"MANUF", "RETAIL"}}};
+    add(SubjectKind::connected_group, Measure::commitment, by_grade);
+    add(SubjectKind::country, Measure::exposure, one(ShareOf{0.4, Total::portfolio}));
+    add(SubjectKind::sector, Measure::default_probability, one(0.02));
+    add(SubjectKind::grade, Measure::expected_loss, one(euros(5))).where = {
+        {SubjectKind::grade, {"G3", "default"}}};
+    add(SubjectKind::portfolio, Measure::concentration_index, one(0.1)).across =
+        SubjectKind::group_or_name;
+    add(SubjectKind::sector, Measure::es_contribution, one(ShareOf{0.4, Total::portfolio}));
+    Limits exact = limits;
+    exact.pop_back();
+
+    std::mt19937 bits{7};
+    auto const any = [&](auto... of) {
+        std::vector<std::string> const all{of...};
+        return all[bits() % all.size()];
+    };
+    auto const name = [&](int number) {
+        auto made = std::make_shared<Name>();
+        made->counterparty_id = "C" + std::to_string(100 + number);
+        made->segment = "corporate";
+        made->sector = any("MANUF", "RETAIL", "AGRI");
+        made->country = any("AT", "DE");
+        if (bits() % 2 == 0) made->groups = {any("GR1", "GR2", "GR3")};
+        made->grade = {static_cast<std::uint8_t>(bits() % 4)};
+        made->exposure_at_default = made->commitment = euros(static_cast<double>(bits() % 50));
+        made->held = bits() % 10 == 0 ? Held::rate_old : Held::no;
+        made->known = bits() % 12 != 0;
+        if (bits() % 2 == 0) made->set_aside.push_back({"exposure", "F", "no counterparty", {}});
+        return made;
+    };
+    std::map<int, std::shared_ptr<Name const>> all;
+    struct Side {
+        std::vector<std::shared_ptr<Name const>> names;
+        std::vector<std::shared_ptr<Name const>> unknown;
+        std::vector<model::NameFigures> figures;
+        std::optional<View> view;
+    };
+    auto const side = [&](View const* before) {
+        auto made = std::make_unique<Side>();
+        for (auto const& [number, each] : all) {
+            (each->known ? made->names : made->unknown).push_back(each);
+            if (!each->known) continue;
+            auto& own = made->figures.emplace_back();
+            own.default_probability = *Probability::from_fraction(0.01 * (1 + each->grade.rank));
+            own.expected_loss = 0.1 * each->exposure_at_default.units();
+        }
+        made->view.emplace(made->names, made->unknown, made->figures, nullptr, shared, settings,
+                           today, before);
+        return made;
+    };
+    for (int number = 0; number < 30; ++number) all[number] = name(number);
+    auto last = side(nullptr);
+    auto known = last->view->check(exact);
+    for (int turn = 0; turn < 300; ++turn) {
+        for (auto moved = 1 + bits() % 3; moved > 0; --moved) {
+            auto const number = static_cast<int>(bits() % 35);
+            if (bits() % 8 == 0)
+                all.erase(number);
+            else
+                all[number] = name(number);
+        }
+        auto now = side(&*last->view);
+        Reach const reach{limits, *last->view, *now->view};
+        auto const seen = now->view->check(reach);
+        auto differences = known.differences(seen, reach);
+        known.take(seen, reach, std::move(differences));
+        auto const expected = now->view->check(exact);
+        ASSERT_EQ(known.usages, expected.usages) << turn;
+        ASSERT_EQ(known.sets_held, expected.sets_held);
+        ASSERT_TRUE(std::ranges::equal(known.unmeasured, expected.unmeasured, {}, &Unmeasured::key,
+                                       &Unmeasured::key))
+            << turn;
+        last = std::move(now);
+    }
+}
+
+TEST_F(Checked, ATouchedTurnHoldsNoContributionAndOfOthersWhatMoved) {
+    add("C1", 60.0);
+    add("C2", 50.0).sector = "RETAIL";
+    auto contribution = limit(SubjectKind::sector, euros(1), Measure::es_contribution);
+    contribution.limit_id = "L2";
+    Limits const limits{limit(SubjectKind::name, euros(9)), contribution};
+    std::vector<std::shared_ptr<Name const>> const all{names.begin(), names.end()};
+    View const before{all, unknown, figures, nullptr, shared, settings, today};
+    auto moved = all;
+    auto other = *all[1];
+    other.exposure_at_default = euros(51.0);
+    moved[1] = std::make_shared<Name const>(other);
+    View const now{moved, unknown, figures, nullptr, shared, settings, today, &before};
+    Reach const touched{limits, before, now};
+    EXPECT_THAT(subjects(now.check(touched)), testing::ElementsAre("name C2"));
+    EXPECT_TRUE(touched.holds({"L1", SubjectKind::name, "C2"}));
+    EXPECT_FALSE(touched.holds({"L1", SubjectKind::name, "C1"}));
+    EXPECT_FALSE(touched.holds({"L2", SubjectKind::sector, "RETAIL"}));
+    EXPECT_TRUE(Reach{limits}.holds({"L2", SubjectKind::sector, "MANUF"}));
+    EXPECT_TRUE(Reach{limits}.holds({"no longer in force", SubjectKind::name, "C1"}));
 }
 
 }  // namespace

@@ -28,7 +28,7 @@ limits:
     measure: exposure
     breach_at: {by: grade, G1: EUR 60 m, G2: EUR 45 m, G3: EUR 30 m, G4: EUR 18 m, others: EUR 9 m}
   - {id: sector, per: sector, measure: exposure, breach_at: EUR 100 m}
-  - {id: tail, per: sector, measure: es_contribution, breach_at: 55% of portfolio}
+  - {id: tail, per: sector, measure: es_contribution, breach_at: 90% of portfolio}
 )";
 
 // Ten companies of EUR 10 m, one of 25 m and one in dollars; all inside their limits.
@@ -291,6 +291,7 @@ TEST_F(Program, AssessBesideServeAsksAndWaits) {
     ASSERT_TRUE(becomes_true([&] { return count("assessment") == "1"; })) << served.log();
     auto const done = assess();
     EXPECT_EQ(done.at("trigger"), "command");
+    EXPECT_EQ(done.at("scope"), "whole");
     EXPECT_EQ(done.at("sequence"), 2);
     EXPECT_EQ(count("change_log"), "0");
     EXPECT_EQ(loadline({"assess", "--seed", "9"}).code, 2);

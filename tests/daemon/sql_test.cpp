@@ -74,7 +74,7 @@ TEST(Schema, HasTheColumnsOfTheContract) {
 alert_event
   event_id bigint! identity, alert_id bigint!, at timestamptz!, actor text!, assessment_id uuid, decision_id text, kind text!, from_state text!, to_state text!, severity text!, observed numeric!, level numeric!, note text
 assessment
-  assessment_id uuid!, sequence bigint! identity, scope text!, trigger text!, as_of timestamptz!, started_at timestamptz!, finished_at timestamptz!, seconds double!, program_version text!, engine text!, health text!=, base_currency text!, names integer!, book_digest text!, limits_digest text!, model_digest text!, confidence double!, horizon_years double!, expected_loss double!, defaulted_loss double!, loss_quantile double!, credit_var double!, expected_shortfall double!, loss_quantile_error double!, credit_var_error double!, expected_shortfall_error double!, plan jsonb!
+  assessment_id uuid!, sequence bigint! identity, scope text!, trigger text!, as_of timestamptz!, started_at timestamptz!, finished_at timestamptz!, seconds double!, program_version text!, engine text!, health text!=, base_currency text!, names integer!, book_digest text!, limits_digest text!, model_digest text!, confidence double!, horizon_years double!, expected_loss double!, defaulted_loss double!, loss_quantile double, credit_var double, expected_shortfall double, loss_quantile_error double, credit_var_error double, expected_shortfall_error double, plan jsonb
 capital
   kind text!, as_of date!, amount numeric!
 change_log
@@ -86,7 +86,7 @@ connected_group
 counterparty
   counterparty_id text!, legal_name text!, segment text!=, sector text, country text, country_of_risk text, lei text, asset_correlation double, watch_since date, watch_reason text
 counterparty_risk
-  counterparty_id text!, assessment_id uuid!, grade text!, flags text[]!=, exposure_at_default numeric!, default_probability double!, downgrade_probability double!, expected_loss double!, standalone_loss_deviation double!, var_contribution double!, var_contribution_error double!, es_contribution double!, es_contribution_error double!
+  counterparty_id text!, assessment_id uuid!, grade text!, flags text[]!=, exposure_at_default numeric!, default_probability double!, downgrade_probability double!, expected_loss double!, standalone_loss_deviation double!, var_contribution double, var_contribution_error double, es_contribution double, es_contribution_error double
 exposure
   exposure_id text!, counterparty_id text!, product text!, currency text!, drawn numeric!, undrawn numeric!=, conversion_factor double, committed boolean!=, add_on numeric!=, collateral numeric!=, netting_set text, collateral_pool text, loss_given_default double, maturity date, booked_at timestamptz, large_exposure_value numeric
 facility_exposure

@@ -9,8 +9,11 @@
 
 #include <algorithm>
 #include <cmath>
+#include <functional>
+#include <limits>
 #include <numeric>
 #include <random>
+#include <utility>
 
 namespace {
 
@@ -237,6 +240,133 @@ TEST(Simulation, EqualLossesAreEqualInWhateverOrderTheyAddUp) {
     std::ranges::sort(losses);
     losses.erase(std::unique(losses.begin(), losses.end()), losses.end());
     EXPECT_EQ(losses.size(), 25U);  // 0, 0.1, ... 2.4
+}
+
+// ---- factors drawn from elsewhere ----
+
+model::FactorLaw shifted_law(Eigen::Index factors) {
+    Eigen::MatrixXd means = Eigen::MatrixXd::Zero(factors, 3);
+    means(factors - 1, 1) = 2.0;
+    means(0, 2) = -1.5;
+    return {means, {2, 9, 5}};
+}
+
+TEST(FactorLaw, ThatIsPlainWeighsNothingAnew) {
+    model::FactorLaw const law;
+    Eigen::VectorXd factors = Eigen::VectorXd::Constant(3, 1.5);
+    law.shift(factors, 7);
+    EXPECT_EQ(factors, Eigen::VectorXd::Constant(3, 1.5));
+    EXPECT_EQ(law.weight(factors), 1.0);
+}
+
+TEST(FactorLaw, WeighsByTheRatioOfTheDensities) {
+    auto const law = shifted_law(2);
+    Eigen::Vector2d const z{0.3, 1.2};
+    auto const density = [&z](double a, double b) {
+        return std::exp(-0.5 * (std::pow(z[0] - a, 2) + std::pow(z[1] - b, 2)));
+    };
+    double const mixed =
+        (2.0 * density(0.0, 0.0) + 9.0 * density(0.0, 2.0) + 5.0 * density(-1.5, 0.0)) / 16.0;
+    EXPECT_NEAR(law.weight(z), density(0.0, 0.0) / mixed, 1e-14);
+    EXPECT_LE(law.weight(Eigen::Vector2d{9.0, -9.0}), 8.0);
+}
+
+TEST(FactorLaw, GivesEveryComponentItsShareOfSixteenScenarios) {
+    auto const law = shifted_law(2);
+    int at_zero = 0;
+    int second = 0;
+    for (std::uint64_t s = 160; s < 176; ++s) {
+        Eigen::VectorXd factors = Eigen::VectorXd::Zero(2);
+        law.shift(factors, s);
+        at_zero += factors.isZero() ? 1 : 0;
+        second += factors[1] == 2.0 ? 1 : 0;
+    }
+    EXPECT_EQ(at_zero, 2);
+    EXPECT_EQ(second, 9);
+}
+
+// The weights' mean is 1, and weighted losses have the mean and the square they have unweighted.
+TEST(Simulation, WeighsShiftedScenariosSoThatNothingIsBiased) {
+    for (auto const& settings : {tests::lender_settings(), revalued_lender()}) {
+        auto const names = tests::lender(150);
+        Migration const migration{settings};
+        Simulation const simulation{names, settings, migration, 3};
+        auto const law = shifted_law(model::factor(settings.indices.correlation).cols());
+        std::size_t const scenarios = 64'000;
+        auto const plain = simulation.sample({}, 0, scenarios, 0);
+        auto const shifted = simulation.sample(law, scenarios, scenarios, 0);
+        for (auto const& of : std::vector<std::function<double(double)>>{
+                 [](double) { return 1.0; }, [](double loss) { return loss / 1e7; },
+                 [](double loss) { return loss * loss / 1e14; }}) {
+            std::vector<double> expected(scenarios);
+            std::vector<double> weighted(scenarios);
+            for (std::size_t s = 0; s < scenarios; ++s) {
+                expected[s] = of(plain.loss[s]);
+                weighted[s] = shifted.weight[s] * of(shifted.loss[s]);
+            }
+            auto const [mean, deviation] = moments(expected);
+            auto const [weighted_mean, weighted_deviation] = moments(weighted);
+            EXPECT_NEAR(weighted_mean, mean,
+                        4.0 * std::hypot(deviation, weighted_deviation) /
+                            std::sqrt(static_cast<double>(scenarios)));
+        }
+    }
+}
+
+TEST(Simulation, DrawsTheSameScenariosAgain) {
+    auto const settings = tests::lender_settings();
+    auto const names = tests::lender(200);
+    Migration const migration{settings};
+    Simulation const simulation{names, settings, migration, 5};
+    auto const f = model::factor(settings.indices.correlation);
+    auto const law = shifted_law(f.cols());
+    auto const sample = simulation.sample(law, 0, 100, 2);
+    std::vector<std::uint64_t> const scenarios{3, 64, 99};
+    simulation.visit(law, scenarios, [&](std::size_t k, auto const& moves, auto const& indices) {
+        double loss = 0.0;
+        for (auto const& [name, amount] : moves) loss += amount;
+        EXPECT_NEAR(loss, sample.loss[scenarios[k]], 1e-6);
+        auto const factors = simulation.factors(law, scenarios[k]);
+        EXPECT_EQ(law.weight(factors), sample.weight[scenarios[k]]);
+        EXPECT_TRUE(indices.isApprox(f * factors));
+    });
+}
+
+// The mean of what is expected given the indices is the mean of what is drawn, within any bounds.
+TEST(Simulation, ExpectsOfAMoveWhatIsDrawnOfIt) {
+    for (double const d : {0.0, 0.3}) {
+        for (auto settings : {tests::lender_settings(), revalued_lender()}) {
+            settings.loss_given_default_deviation = d;
+            tests::Names const names{tests::name(5, 100.0, 45.0)};
+            Migration const migration{settings};
+            Simulation const simulation{names, settings, migration, 9};
+            std::vector<std::uint64_t> scenarios(50'000);
+            std::iota(scenarios.begin(), scenarios.end(), 0U);
+            constexpr double infinity = std::numeric_limits<double>::infinity();
+            for (auto const& [low, high] : {std::pair{-infinity, infinity},
+                                            {0.5, 1.5},
+                                            {-infinity, 0.0},
+                                            {20.0, 45.2 + 1e-9},
+                                            {45.2 + 1e-9, 70.0},
+                                            {101.0, infinity}}) {
+                std::vector<double> differences(scenarios.size());
+                simulation.visit({}, scenarios,
+                                 [&, low = low, high = high](std::size_t k, auto const& moves,
+                                                             auto const& indices) {
+                                     differences[k] =
+                                         -simulation.expected_move(0, indices, low, high);
+                                     for (auto const& [name, amount] : moves)
+                                         if (low <= amount && amount <= high)
+                                             differences[k] += amount;
+                                 });
+                auto const [mean, deviation] = moments(differences);
+                EXPECT_NEAR(
+                    mean, 0.0,
+                    4.0 * deviation / std::sqrt(static_cast<double>(scenarios.size())) + 1e-12)
+                    << low << ' ' << high << ' ' << d;
+            }
+        }
+    }
 }
 
 TEST(Recovery, HasTheMeanAndDeviationOfModelYaml) {

@@ -1,0 +1,46 @@
+#pragma once
+
+#include "model/units.hpp"
+
+#include <Eigen/Core>
+
+#include <cstdint>
+#include <string_view>
+#include <utility>
+#include <vector>
+
+namespace model {
+
+// How the loss distribution is taken back from its transform. windowed: a smoothed loss, on few
+// nodes. lattice: losses on a lattice of a stated unit, every atom of it.
+enum class Inversion { windowed, lattice };
+inline constexpr std::pair<Inversion, std::string_view> inversion_words[] = {
+    {Inversion::windowed, "windowed inversion"}, {Inversion::lattice, "lattice inversion"}};
+
+// A component of the mixture that the systematic factors are drawn from: N(mean, I).
+struct Component {
+    Eigen::VectorXd mean;
+    std::uint32_t points = 0;  // a scrambling
+    friend bool operator==(Component const&, Component const&) = default;
+};
+
+// Everything about how the figures of a book are reached that is not the book: the same plan on the
+// same book gives the same bits. Found once for a book (plan.cpp) and kept while it serves.
+struct Plan {
+    Inversion inversion = Inversion::windowed;
+    std::uint64_t seed = 1;
+    std::uint32_t scramblings = 16;  // independent; 1: a quadrature rule
+    std::vector<Component> mixture;
+    double damping = 0.0;     // real part of the contour, per base currency
+    double period = 0.0;      // of the inverted functions, base currency
+    double lowest = 0.0;      // where they begin: the loss, less what staying costs, is above it
+    std::uint32_t nodes = 0;  // on the contour
+    double width = 0.0;       // of the window, base currency; 0: none
+    double large_from = 0.0;  // names that can lose as much have a factor of their own
+    double unit = 0.0;        // of the lattice, base currency; 0: none
+    double resolution = 0.0;  // at which "loss = quantile" is taken, base currency
+    double effective_share = 1.0;  // of the points, in the tail, when the plan was found
+    friend bool operator==(Plan const&, Plan const&) = default;
+};
+
+}  // namespace model
