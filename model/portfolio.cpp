@@ -1,5 +1,7 @@
 #include "model/portfolio.hpp"
 
+#include <Eigen/Eigenvalues>
+
 #include <algorithm>
 #include <cmath>
 #include <numbers>
@@ -18,6 +20,23 @@ double angle(double asset_correlation) {
 
 double own_correlation(Name const& name, Settings const& settings) {
     return name.asset_correlation.value_or(settings.asset_correlation[name.grade.rank]);
+}
+
+// The independent factors behind the indices, those that names lean on most first: principal
+// components of the indices, each with the weight its kind has in a name's.
+Eigen::MatrixXd principal_loadings(Settings const& settings) {
+    auto const& [all, sector, country] = settings.index_weights;
+    Eigen::MatrixXd const factors = factor(settings.indices.correlation);
+    Eigen::VectorXd weight(factors.rows());
+    for (Eigen::Index i = 0; i < weight.size(); ++i) {
+        auto const& name = settings.indices.names[static_cast<std::size_t>(i)];
+        weight[i] = name.starts_with("sector:")    ? sector
+                    : name.starts_with("country:") ? country
+                                                   : all;
+    }
+    Eigen::SelfAdjointEigenSolver<Eigen::MatrixXd> const solver{
+        factors.transpose() * weight.cwiseAbs2().asDiagonal() * factors};
+    return factors * solver.eigenvectors().rowwise().reverse();
 }
 
 }  // namespace
@@ -44,7 +63,7 @@ Cells::Cells(std::span<std::shared_ptr<Name const> const> names, Settings const&
             auto const [at, is_new] =
                 blend_of_indices.try_emplace({indices.first, indices.second}, next);
             if (is_new) blends_.push_back(indices);
-            blend_of_codes_.emplace(std::pair{name.sector, name.country}, at->second);
+            blend_of_codes_[name.sector][name.country] = at->second;
         }
     }
     if (found.size() <= own_kinds_max) {
@@ -67,12 +86,14 @@ Cells::Cells(std::span<std::shared_ptr<Name const> const> names, Settings const&
         for (std::uint8_t grade = 0; grade < grades; ++grade)
             for (double const node : nodes_) kinds_.push_back({grade, std::pow(std::sin(node), 2)});
     }
-    loadings_ = factor(settings.indices.correlation).rowwise().reverse();
+    loadings_ = principal_loadings(settings);
 }
 
 std::optional<std::uint32_t> Cells::blend_of(Name const& name) const {
-    auto const found = blend_of_codes_.find(std::pair{name.sector, name.country});
-    return found == blend_of_codes_.end() ? std::nullopt : std::optional{found->second};
+    auto const sector = blend_of_codes_.find(name.sector);
+    if (sector == blend_of_codes_.end()) return std::nullopt;
+    auto const country = sector->second.find(name.country);
+    return country == sector->second.end() ? std::nullopt : std::optional{country->second};
 }
 
 std::optional<Stake> Cells::stake(Name const& name) const {

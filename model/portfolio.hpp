@@ -85,7 +85,7 @@ private:
 
     Settings const* settings_ = nullptr;
     std::shared_ptr<Migration const> migration_;
-    std::map<std::pair<std::string, std::string>, std::uint32_t, std::less<>> blend_of_codes_;
+    std::map<std::string, std::map<std::string, std::uint32_t>> blend_of_codes_;  // sector, country
     std::vector<Blend> blends_;
     std::vector<Kind> kinds_;    // ascending
     std::vector<double> nodes_;  // of asin(sqrt(asset correlation)); empty: a kind for each
