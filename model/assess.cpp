@@ -16,13 +16,14 @@ namespace model {
 namespace {
 
 // A plan serves a book while what it leaves out stays below these parts of credit VaR.
-constexpr double smoothing_max = 4e-4;
-constexpr double fourth_max = 3e-4;
+constexpr double smoothing_max = 2e-4;
+constexpr double fourth_max = 1e-4;
 constexpr double image_max = 1e-4;  // of the tail
 constexpr std::uint32_t nodes_max = 4096;
 constexpr double atom_widths = 3.0;
 constexpr double work_max = 2e9;  // factors of large names
-constexpr double wider = 1.25;    // as the curve has it
+constexpr double fourth_part_min = 0.1;
+constexpr double fresh_strain_max = 0.5;
 // More changes at once, or since it was built, and the transform is built anew.
 constexpr std::size_t changed_max = 32;
 constexpr std::size_t updates_max = 1000;
@@ -40,14 +41,21 @@ struct Fitness {
 
 namespace {
 
-// What is wrong with the plan, if anything; `part` of what may be.
-std::string unfit(Fitness const& fitness, Plan const& plan, double part) {
-    if (fitness.image > part * image_max) return "the period is too short for the tail";
-    if (fitness.smoothing > part * smoothing_max) return "the window is too wide for the loss";
-    if (fitness.fourth > part * fourth_max) return "too few names have a factor of their own";
-    if (fitness.effective_share < part * plan.effective_share / 2.0)
+// What a plan leaves out over what one may leave out, the largest.
+double strain(Fitness const& fitness) {
+    return std::max({fitness.image / image_max, fitness.smoothing / smoothing_max,
+                     fitness.fourth / fourth_max});
+}
+
+// What is wrong with a plan that strains more than it may, if anything.
+std::string unfit(Fitness const& fitness, Plan const& plan, double strain_max) {
+    if (fitness.effective_share < 0.5 * plan.effective_share)
         return "too few of the points lie in the tail";
-    return {};
+    if (strain(fitness) <= strain_max) return {};
+    if (fitness.image > strain_max * image_max) return "the period is too short for the tail";
+    if (fitness.smoothing > strain_max * smoothing_max)
+        return "the window is too wide for the loss";
+    return "too few names have a factor of their own";
 }
 
 // A plan that cures what is wrong with this one; nothing where that would cost too much.
@@ -83,6 +91,13 @@ void each_of(std::size_t count, unsigned threads, Work const& work) {
     in_blocks(count, names_per_task, threads, [&](std::size_t from, std::size_t to) {
         for (std::size_t i = from; i < to; ++i) work(i);
     });
+}
+
+// Of a name's loss in the tail, by its mean there and the size of its largest move, as if it had
+// but that.
+double fourth_cumulant(double mean, double largest) {
+    double const p = std::min(mean / largest, 1.0);
+    return p * (1.0 - p) * (1.0 - 6.0 * p * (1.0 - p)) * std::pow(largest, 4);
 }
 
 // What errors are small or large beside.
@@ -155,14 +170,22 @@ Figures Engine::assess(std::span<std::shared_ptr<Name const> const> names,
         return figures;
     }
 
+    // A plan found just now is refined until it strains little, or would cost too much; one that
+    // was given serves until it strains twice as much as when it was found.
     bool fresh = !plan_;
     std::string reason;
     for (;;) {
         if (!plan_) {
             plan_ = find_plan(*state.cells, state.stakes, settings->simulation.seed, threads_);
             if (auto const exact = on_lattice(*plan_, *settings, state.stakes)) plan_ = exact;
+        } else if (!fresh && plan_->inversion == Inversion::lattice &&
+                   !is_on_lattice(*plan_, state.stakes)) {
+            reason = "losses are no longer multiples of the unit";
+            fresh = true;
+            plan_.reset();
+            continue;
         }
-        if (!updated || fresh || !reason.empty()) rebuild();
+        if (!updated || fresh) rebuild();
         figures.curve = state.transform->curve(base);
         state.atoms = state.transform->atoms(figures.curve.quantile(settings->confidence) - base);
         if (state.atoms.none >= settings->confidence) {
@@ -170,25 +193,31 @@ Figures Engine::assess(std::span<std::shared_ptr<Name const> const> names,
             break;
         }
         auto fitness = fitness_of(figures.curve, *settings, totals.expected_loss);
-        auto wrong = unfit(fitness, *plan_, fresh ? 0.5 : 1.0);
-        std::optional<Plan> better;
-        if (!wrong.empty() && fresh) better = refined(*plan_, fitness, state.transform->large());
-        if (!better && (wrong.empty() || fresh)) {
-            fill(figures, base, fitness);
-            wrong = unfit(fitness, *plan_, fresh ? 0.5 : 1.0);
-            if (wrong.empty()) break;
-            if (fresh) better = refined(*plan_, fitness, state.transform->large());
-            if (fresh && !better) break;
+        std::size_t const large = state.transform->large();
+        if (fresh && strain(fitness) > fresh_strain_max) {
+            if (auto better = refined(*plan_, fitness, large)) {
+                plan_ = std::move(better);
+                continue;
+            }
         }
-        if (fresh) {
-            plan_ = better;
+        fill(figures, base, fitness);
+        if (!fresh) {
+            reason = unfit(fitness, *plan_, std::max(1.0, 2.0 * plan_->strain));
+            if (reason.empty()) break;
+            fresh = true;
+            plan_.reset();
             continue;
         }
-        reason = wrong;
-        fresh = true;
-        plan_.reset();
+        if (strain(fitness) > fresh_strain_max) {
+            if (auto better = refined(*plan_, fitness, large)) {
+                plan_ = std::move(better);
+                continue;
+            }
+        }
+        plan_->effective_share = fitness.effective_share;
+        plan_->strain = strain(fitness);
+        break;
     }
-    if (plan_->effective_share == 0.0) plan_->effective_share = state.transform->effective_share();
     figures.plan = *plan_;
     figures.plan_replaced = std::move(reason);
     return figures;
@@ -226,7 +255,9 @@ bool Engine::update(std::span<std::shared_ptr<Name const> const> names,
             state.names.assign(names.begin(), names.end());
             state.stakes = std::move(stakes);
             state.updates += changed.size();
-            return changed.empty() || state.transform->replace(changed);
+            if (changed.empty() || state.transform->replace(changed)) return true;
+            state.transform.reset();
+            return false;
         }
     }
     state.names.assign(names.begin(), names.end());
@@ -294,9 +325,10 @@ void Engine::fill(Figures& figures, double base, Fitness& fitness) {
     // atoms near the quantile are in the tail in part, what it would be with them out or in.
     bool const smooth = std::max(fitness.smoothing, jump / scale) <= 0.5 * smoothing_max;
     double const width = smooth ? 0.0 : atom_widths * plan_->width;
-    std::array const beside{Transform::Target{contour.tail(x, wider), contour.tail_image()},
+    std::array const beside{Transform::Target{contour.tail(x, wider_window), contour.tail_image()},
                             Transform::Target{contour.tail(x - width), contour.tail_image()},
                             Transform::Target{contour.tail(x + width), contour.tail_image()}};
+    double const window_effect = plan_->width > 0.0 ? curve.window_effect(q) : 0.0;
     double const tail_before = curve.tail(q - width);
     double const tail_after = curve.tail(q + width);
     transform->differentiate({above, at}, beside);
@@ -310,8 +342,14 @@ void Engine::fill(Figures& figures, double base, Fitness& fitness) {
     auto const p = static_cast<double>(parts);
     double const share = 1.0 / std::sqrt(p * (p - 1.0));
 
-    // What cumulants leave out, were the tail exponential: kappa_4 rate^3 / 24.
+    // What cumulants leave out of the tail: kappa_4 / 24 times its fourth derivative, which is not
+    // trusted to be small beside an exponential's.
     double const rate = density / beyond;
+    auto fourth_weights = above.weights;
+    for (std::size_t k = 0; k < fourth_weights.size(); ++k)
+        fourth_weights[k] *= std::pow(contour.nodes()[k], 4);
+    double const fourth_derivative = std::max(std::abs(mean_of(curve.functional(fourth_weights))),
+                                              fourth_part_min * beyond * std::pow(rate, 4));
     std::vector<double> fourth(names.size());
 
     each_of(names.size(), threads_, [&](std::size_t i) {
@@ -348,7 +386,7 @@ void Engine::fill(Figures& figures, double base, Fitness& fitness) {
         }
         if (transform->is_large(stakes[i])) {
             auto const aside = transform->beside_of(stakes[i]);
-            double const window = (aside[0] - beyond_quantile) / beyond / (wider - 1.0);
+            double const window = (aside[0] - beyond_quantile) / beyond * window_effect;
             double const before = (aside[1] + at_quantile * (beyond - tail_before)) / beyond;
             double const after = (aside[2] + at_quantile * (beyond - tail_after)) / beyond;
             double const moved = std::max(std::abs(before - own.es_contribution),
@@ -356,7 +394,7 @@ void Engine::fill(Figures& figures, double base, Fitness& fitness) {
             es_sources[sources - 1] = static_cast<float>(
                 std::copysign(std::hypot(window, width > 0.0 ? moved : 0.0), window));
         } else if (stakes[i].takes_part)
-            fourth[i] = std::pow(stakes[i].largest, 3) * std::abs(own.es_contribution);
+            fourth[i] = fourth_cumulant(std::abs(own.es_contribution), stakes[i].largest);
     });
 
     // Each takes its part of what the sums are off by.
@@ -375,8 +413,8 @@ void Engine::fill(Figures& figures, double base, Fitness& fitness) {
     figures.var_residual = settle(&NameFigures::var_contribution, x);
     figures.es_residual = settle(&NameFigures::es_contribution, totals.expected_shortfall - base);
 
-    fitness.fourth =
-        std::accumulate(fourth.begin(), fourth.end(), 0.0) * std::pow(rate, 3) / 24.0 / scale;
+    double const cumulant = std::accumulate(fourth.begin(), fourth.end(), 0.0);
+    fitness.fourth = std::abs(cumulant) * fourth_derivative / 24.0 / density / scale;
     fitness.effective_share = transform->effective_share();
 
     double const left_out = fitness.fourth * scale;
@@ -386,7 +424,8 @@ void Engine::fill(Figures& figures, double base, Fitness& fitness) {
 
     // The last source of error is the method's own: the window, what cumulants leave out, and the
     // part of what the sums missed. Only the window's effect on large names is known by name.
-    double const es_window = (curve.excess(q, wider) - curve.excess(q)) / beyond / (wider - 1.0);
+    double const es_window =
+        (curve.excess(q, wider_window) - curve.excess(q)) / beyond * window_effect;
     double const es_move = std::max(std::abs(totals.expected_shortfall - base), 1e-300);
     double const var_move = std::max(std::abs(x), 1e-300);
     double const es_common = std::hypot(left_out / es_move, figures.es_residual);

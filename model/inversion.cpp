@@ -12,10 +12,6 @@
 namespace model {
 namespace {
 
-// A wider window tells what the window does: a quantile at an atom of the loss moves in proportion
-// to the width, so by what it moves now over (wider_by - 1); one where the loss is smooth by far
-// less.
-constexpr double wider_by = 1.25;
 // A probability is taken to be reached where rounding may have kept it from it.
 constexpr double rounding = 1e-9;
 // Where a window's kernel is as good as gone, in widths.
@@ -179,7 +175,8 @@ double LossCurve::image_bound() const {
 
 double LossCurve::tail_error(double x) const {
     double const scrambling = sampled_ ? error_of_mean(tails(x)) : 0.0;
-    double const smoothing = width_ > 0.0 ? (tail(x, wider_by) - tail(x)) / (wider_by - 1.0) : 0.0;
+    double const smoothing =
+        width_ > 0.0 ? (tail(x, wider_window) - tail(x)) * window_effect(x) : 0.0;
     return std::hypot(scrambling, smoothing, image_bound());
 }
 
@@ -205,14 +202,25 @@ double LossCurve::quantile_error(double confidence) const {
 
 double LossCurve::smoothing(double confidence) const {
     if (width_ == 0.0) return 0.0;
-    return std::abs(quantile(confidence, wider_by) - quantile(confidence)) / (wider_by - 1.0);
+    double const q = quantile(confidence);
+    return std::abs(quantile(confidence, wider_window) - q) * window_effect(q);
+}
+
+double LossCurve::window_effect(double x) const {
+    double const here = tail(x);
+    double const wider = tail(x, wider_window);
+    double const widest = tail(x, wider_window * wider_window);
+    double const growth = std::abs((widest - wider) / (wider - here));
+    // Turned this way round, no movement at all counts as an atom's.
+    double const first = growth > wider_window ? growth : wider_window;
+    return 1.0 / (std::min(first, std::pow(wider_window, 6)) - 1.0);
 }
 
 double LossCurve::shortfall_error(double confidence) const {
     double const q = quantile(confidence);
     double const scrambling = sampled_ ? error_of_mean(excesses(q)) : 0.0;
     double const smoothing =
-        width_ > 0.0 ? (excess(q, wider_by) - excess(q)) / (wider_by - 1.0) : 0.0;
+        width_ > 0.0 ? (excess(q, wider_window) - excess(q)) * window_effect(q) : 0.0;
     double const image = image_bound() * (highest_ - q);
     return std::hypot(scrambling, smoothing, image) / (1.0 - confidence);
 }

@@ -271,6 +271,13 @@ Plan find_plan(Cells const& cells, std::span<Stake const> stakes, std::uint64_t 
     return plan;
 }
 
+bool is_on_lattice(Plan const& plan, std::span<Stake const> stakes) {
+    return std::ranges::all_of(stakes, [&](Stake const& stake) {
+        double const units = stake.on_default[0] / plan.unit;
+        return !stake.takes_part || std::abs(units - std::nearbyint(units)) < 1e-6;
+    });
+}
+
 std::optional<Plan> on_lattice(Plan plan, Settings const& settings, std::span<Stake const> stakes) {
     if (form_of(settings) != Form::fixed) return std::nullopt;
     std::int64_t common = 0;  // thousandths

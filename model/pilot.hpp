@@ -27,4 +27,7 @@ Plan find_plan(Cells const& cells, std::span<Stake const> stakes, std::uint64_t 
 // have no unit in common that is coarse enough.
 std::optional<Plan> on_lattice(Plan plan, Settings const& settings, std::span<Stake const> stakes);
 
+// Whether all losses are multiples of the plan's unit.
+bool is_on_lattice(Plan const& plan, std::span<Stake const> stakes);
+
 }  // namespace model

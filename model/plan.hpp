@@ -40,6 +40,7 @@ struct Plan {
     double unit = 0.0;        // of the lattice, base currency; 0: none
     double resolution = 0.0;  // at which "loss = quantile" is taken, base currency
     double effective_share = 1.0;  // of the points, in the tail, when the plan was found
+    double strain = 0.0;  // then: what it left out over what a plan may leave out, the largest
     friend bool operator==(Plan const&, Plan const&) = default;
 };
 
