@@ -21,7 +21,7 @@ constexpr double fourth_max = 1e-4;
 constexpr double image_max = 1e-4;  // of the tail
 constexpr std::uint32_t nodes_max = 4096;
 constexpr double atom_widths = 3.0;
-constexpr double work_max = 2e9;  // factors of large names
+constexpr double work_max = 3e8;  // factors of large names
 constexpr double fourth_part_min = 0.1;
 constexpr double fresh_strain_max = 0.5;
 // More changes at once, or since it was built, and the transform is built anew.
