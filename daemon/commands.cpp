@@ -471,7 +471,7 @@ int run(int argc, char** argv) {
     std::optional<std::int64_t> seed;
     auto* const pass = add(app, "assess", "one pass over the whole book, then exit",
                            "loadline assess --format json");
-    pass->add_option("--seed", seed, "random numbers of another seed than model.yaml's")
+    pass->add_option("--seed", seed, "of the simulation's random numbers, instead of model.yaml's")
         ->check(CLI::NonNegativeNumber);
     pass->callback([&] { command = [&] { return assess(common, seed); }; });
 
@@ -484,11 +484,11 @@ int run(int argc, char** argv) {
             "loadline verify --scenarios 4000000");
     verifying
         ->add_option("--scenarios", verify_plan.scenarios,
-                     "of the simulation: four times as many find differences half as large")
-        ->check(CLI::Range(std::uint64_t{1'000}, std::uint64_t{1'000'000'000}))
-        ->capture_default_str();
+                     "instead of model.yaml's: four times as many find differences half as large")
+        ->check(CLI::Range(std::uint64_t{1'000}, std::uint64_t{1'000'000'000}));
     verifying
-        ->add_option("--seed", verify_plan.seed, "random numbers of another seed than model.yaml's")
+        ->add_option("--seed", verify_plan.seed,
+                     "of the simulation's random numbers, instead of model.yaml's")
         ->check(CLI::NonNegativeNumber);
     verifying->callback([&] { command = [&] { return verify(common, verify_plan); }; });
 

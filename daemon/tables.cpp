@@ -179,8 +179,8 @@ double double_of(nlohmann::json const& json) {
 
 // Names every field, so that one more in the plan does not compile without its place here.
 nlohmann::json json_of(model::Plan const& plan) {
-    auto const& [inversion, seed, scramblings, mixture, damping, period, lowest, nodes, width,
-                 large_from, unit, resolution, effective_share, strain] = plan;
+    auto const& [inversion, seed, scramblings, mixture, damping, period, lowest, nodes, width, unit,
+                 large_from, effective_share, strain] = plan;
     auto components = nlohmann::json::array();
     for (auto const& [mean, points] : mixture)
         components.push_back(
@@ -196,7 +196,6 @@ nlohmann::json json_of(model::Plan const& plan) {
             {"width", json_of(width)},
             {"large_from", json_of(large_from)},
             {"unit", json_of(unit)},
-            {"resolution", json_of(resolution)},
             {"effective_share", json_of(effective_share)},
             {"strain", json_of(strain)}};
 }
@@ -204,8 +203,8 @@ nlohmann::json json_of(model::Plan const& plan) {
 // Throws where a field is missing or of another kind.
 model::Plan plan_of(nlohmann::json const& json) {
     model::Plan plan;
-    auto& [inversion, seed, scramblings, mixture, damping, period, lowest, nodes, width, large_from,
-           unit, resolution, effective_share, strain] = plan;
+    auto& [inversion, seed, scramblings, mixture, damping, period, lowest, nodes, width, unit,
+           large_from, effective_share, strain] = plan;
     auto const text = json.at("inversion").get<std::string>();
     auto const known = alerts::find(model::inversion_words, text);
     if (!known) throw std::invalid_argument("no such inversion: " + text);
@@ -225,7 +224,6 @@ model::Plan plan_of(nlohmann::json const& json) {
     width = double_of(json.at("width"));
     large_from = double_of(json.at("large_from"));
     unit = double_of(json.at("unit"));
-    resolution = double_of(json.at("resolution"));
     effective_share = double_of(json.at("effective_share"));
     strain = double_of(json.at("strain"));
     return plan;

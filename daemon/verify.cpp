@@ -88,9 +88,10 @@ Verification verify(Connection& connection, config::Rules const& rules, VerifyPl
     if (!figures.plan_replaced.empty())
         tell(fmt::format("by another plan, since {}", figures.plan_replaced));
 
-    tell(fmt::format("judging by {} scenarios", plan.scenarios));
+    auto const scenarios = plan.scenarios.value_or(settings->simulation.scenarios);
+    tell(fmt::format("judging by {} scenarios", scenarios));
     auto const judged = model::judge(book.names(), *settings,
-                                     {.scenarios = plan.scenarios,
+                                     {.scenarios = scenarios,
                                       .seed = plan.seed.value_or(settings->simulation.seed),
                                       .mode = model::JudgePlan::Mode::shifted,
                                       .sharpened = 2 * model::checked_names},

@@ -14,8 +14,9 @@
 namespace process {
 
 struct VerifyPlan {
-    std::uint64_t scenarios = 2'000'000;  // of the judge; >= 1,000
-    std::optional<std::uint64_t> seed;    // of the judge; nothing: model.yaml's
+    // Of the judge; nothing: model.yaml's.
+    std::optional<std::uint64_t> scenarios;  // >= 1,000
+    std::optional<std::uint64_t> seed;
 };
 
 struct Verification {

@@ -8,38 +8,38 @@
 #include <array>
 #include <cmath>
 #include <numeric>
-#include <stdexcept>
-#include <string_view>
 #include <utility>
 
 namespace model {
 namespace {
 
-// A plan serves a book while what it leaves out stays below these parts of credit VaR.
+// What a plan may leave out: of the quantile, over what the shortfall is beyond the expected loss;
+// images, of the tail.
 constexpr double smoothing_max = 2e-4;
 constexpr double fourth_max = 1e-4;
-constexpr double image_max = 1e-4;  // of the tail
-constexpr std::uint32_t nodes_max = 4096;
-constexpr double atom_widths = 3.0;
-constexpr double work_max = 3e8;  // factors of large names
-constexpr double fourth_part_min = 0.1;
+constexpr double image_max = 1e-4;
+// A plan found just now is refined until it strains no more than this.
 constexpr double fresh_strain_max = 0.5;
+// Beyond these, refining costs more than it is worth: nodes, and factors of large names in all.
+constexpr std::uint32_t nodes_max = 4096;
+constexpr double work_max = 3e8;
+constexpr std::uint32_t points_min = 16;  // of the smallest component
+// So far away, in widths, a window has let an atom out of the tail or into it.
+constexpr double atom_widths = 3.0;
+// A fourth derivative is taken for no less than this part of an exponential tail's.
+constexpr double fourth_part_min = 0.1;
 // More changes at once, or since it was built, and the transform is built anew.
 constexpr std::size_t changed_max = 32;
 constexpr std::size_t updates_max = 1000;
 constexpr std::size_t names_per_task = 1024;
 
-}  // namespace
-
 // What a pass found, by which a plan is judged.
 struct Fitness {
-    double smoothing = 0.0;  // of the quantile, over credit VaR
-    double fourth = 0.0;
-    double image = 0.0;  // over the tail
+    double smoothing = 0.0;  // by the window
+    double fourth = 0.0;     // by cumulants that end with the third
+    double image = 0.0;      // by a period that ends
     double effective_share = 1.0;
 };
-
-namespace {
 
 // What a plan leaves out over what one may leave out, the largest.
 double strain(Fitness const& fitness) {
@@ -61,14 +61,14 @@ std::string unfit(Fitness const& fitness, Plan const& plan, double strain_max) {
 // A plan that cures what is wrong with this one; nothing where that would cost too much.
 std::optional<Plan> refined(Plan plan, Fitness const& fitness, std::size_t large) {
     if (plan.inversion == Inversion::lattice) return std::nullopt;
-    if (fitness.image > 0.5 * image_max) {
+    if (fitness.image > fresh_strain_max * image_max) {
         plan.period *= 1.5;
         plan.damping = 1.0 / plan.period;
         plan.nodes = static_cast<std::uint32_t>(1.5 * plan.nodes);
-    } else if (fitness.smoothing > 0.5 * smoothing_max) {
+    } else if (fitness.smoothing > fresh_strain_max * smoothing_max) {
         plan.width /= 2.0;
         plan.nodes *= 2;
-    } else if (fitness.fourth > 0.5 * fourth_max) {
+    } else if (fitness.fourth > fresh_strain_max * fourth_max) {
         plan.large_from /= 2.0;
         large *= 2;
     } else {
@@ -80,7 +80,7 @@ std::optional<Plan> refined(Plan plan, Fitness const& fitness, std::size_t large
         for (auto const& component : plan.mixture) points += component.points;
         return points * plan.scramblings * plan.nodes * static_cast<double>(large);
     };
-    while (work() > work_max && plan.mixture.back().points > 16)
+    while (work() > work_max && plan.mixture.back().points > points_min)
         for (auto& component : plan.mixture) component.points /= 2;
     if (work() > work_max) return std::nullopt;
     return plan;
@@ -130,18 +130,29 @@ double Figures::contribution_error(Contribution kind, std::span<std::uint32_t co
     return std::sqrt(squares);
 }
 
+// What the last book left.
 struct Engine::State {
+    unsigned threads = 0;
+    std::optional<Plan> plan;
     std::vector<std::shared_ptr<Name const>> names;
     std::shared_ptr<Settings const> settings;
     std::shared_ptr<Cells const> cells;
     std::vector<Stake> stakes;  // by name
     std::optional<Transform> transform;
-    Transform::Atoms atoms;
     std::size_t updates = 0;  // since the transform was built
+
+    bool update(std::span<std::shared_ptr<Name const> const> book,
+                std::shared_ptr<Settings const> const& model);
+    void rebuild();
+    [[nodiscard]] std::string misfit() const;
+    void fill_at_base(Figures& figures, double base) const;
+    void fill(Figures& figures, double base, Transform::Atoms const& atoms, Fitness& fitness);
 };
 
-Engine::Engine(unsigned threads, std::optional<Plan> plan)
-    : threads_{threads}, plan_{std::move(plan)}, state_{std::make_unique<State>()} {}
+Engine::Engine(unsigned threads, std::optional<Plan> plan) : state_{std::make_unique<State>()} {
+    state_->threads = threads;
+    state_->plan = std::move(plan);
+}
 Engine::~Engine() = default;
 Engine::Engine(Engine&&) noexcept = default;
 Engine& Engine::operator=(Engine&&) noexcept = default;
@@ -149,156 +160,153 @@ Engine& Engine::operator=(Engine&&) noexcept = default;
 Figures Engine::assess(std::span<std::shared_ptr<Name const> const> names,
                        std::shared_ptr<Settings const> const& settings) {
     State& state = *state_;
-    bool const updated = update(names, settings);
+    auto& [threads, plan, book, model, cells, stakes, transform, updates] = state;
+    bool const updated = state.update(names, settings);
 
     Figures figures;
     figures.names.resize(names.size());
-    each_of(names.size(), threads_, [&](std::size_t i) {
-        figures.names[i] = closed_form(*names[i], *settings, state.cells->migration());
+    each_of(names.size(), threads, [&](std::size_t i) {
+        figures.names[i] = closed_form(*names[i], *settings, cells->migration());
     });
     auto& totals = figures.totals;
     double base = 0.0;
     for (std::size_t i = 0; i < names.size(); ++i) {
         bool const lost = names[i]->grade == settings->grades.in_default();
         (lost ? totals.defaulted_loss : totals.expected_loss) += figures.names[i].expected_loss;
-        base += state.stakes[i].base;
+        base += stakes[i].base;
     }
-    if (std::ranges::none_of(state.stakes, &Stake::takes_part)) {
+    if (std::ranges::none_of(stakes, &Stake::takes_part)) {
         totals.loss_quantile = totals.expected_shortfall = base;
         for (std::size_t i = 0; i < names.size(); ++i)
-            figures.names[i].es_contribution = state.stakes[i].base;
+            figures.names[i].es_contribution = stakes[i].base;
         return figures;
     }
 
     // A plan found just now is refined until it strains little, or would cost too much; one that
     // was given serves until it strains twice as much as when it was found.
-    bool fresh = !plan_;
-    std::string reason;
+    std::string reason = plan ? state.misfit() : std::string{};
+    if (!reason.empty()) plan.reset();
+    bool fresh = !plan;
     for (;;) {
-        if (!plan_) {
-            plan_ = find_plan(*state.cells, state.stakes, settings->simulation.seed, threads_);
-            if (auto const exact = on_lattice(*plan_, *settings, state.stakes)) plan_ = exact;
-        } else if (!fresh && plan_->inversion == Inversion::lattice &&
-                   !is_on_lattice(*plan_, state.stakes)) {
-            reason = "losses are no longer multiples of the unit";
-            fresh = true;
-            plan_.reset();
-            continue;
+        if (!plan) {
+            plan = find_plan(*cells, stakes, settings->simulation.seed, threads);
+            if (auto const exact = on_lattice(*plan, *settings, stakes)) plan = exact;
         }
-        if (!updated || fresh) rebuild();
-        figures.curve = state.transform->curve(base);
-        state.atoms = state.transform->atoms(figures.curve.quantile(settings->confidence) - base);
-        if (state.atoms.none >= settings->confidence) {
-            fill_at_base(figures, base);
+        if (!updated || fresh) state.rebuild();
+        figures.curve = transform->curve(base);
+        auto const atoms = transform->atoms(figures.curve.quantile(settings->confidence) - base);
+        if (atoms.none >= settings->confidence) {
+            state.fill_at_base(figures, base);
             break;
         }
         auto fitness = fitness_of(figures.curve, *settings, totals.expected_loss);
-        std::size_t const large = state.transform->large();
+        std::size_t const large = transform->large();
         if (fresh && strain(fitness) > fresh_strain_max) {
-            if (auto better = refined(*plan_, fitness, large)) {
-                plan_ = std::move(better);
+            if (auto better = refined(*plan, fitness, large)) {
+                plan = std::move(better);
                 continue;
             }
         }
-        fill(figures, base, fitness);
+        state.fill(figures, base, atoms, fitness);
         if (!fresh) {
-            reason = unfit(fitness, *plan_, std::max(1.0, 2.0 * plan_->strain));
+            reason = unfit(fitness, *plan, std::max(1.0, 2.0 * plan->strain));
             if (reason.empty()) break;
             fresh = true;
-            plan_.reset();
+            plan.reset();
             continue;
         }
         if (strain(fitness) > fresh_strain_max) {
-            if (auto better = refined(*plan_, fitness, large)) {
-                plan_ = std::move(better);
+            if (auto better = refined(*plan, fitness, large)) {
+                plan = std::move(better);
                 continue;
             }
         }
-        plan_->effective_share = fitness.effective_share;
-        plan_->strain = strain(fitness);
+        plan->effective_share = fitness.effective_share;
+        plan->strain = strain(fitness);
         break;
     }
-    figures.plan = *plan_;
+    figures.plan = *plan;
     figures.plan_replaced = std::move(reason);
     return figures;
 }
 
 // Brings the state to a book. True where the transform was brought there too, by what differs.
-bool Engine::update(std::span<std::shared_ptr<Name const> const> names,
-                    std::shared_ptr<Settings const> const& settings) {
-    State& state = *state_;
-    std::vector<Stake> stakes(names.size());
-    if (state.transform && state.settings == settings && state.updates < updates_max) {
+bool Engine::State::update(std::span<std::shared_ptr<Name const> const> book,
+                           std::shared_ptr<Settings const> const& model) {
+    std::vector<Stake> next(book.size());
+    if (transform && settings == model && updates < updates_max) {
         // Both are in the order of counterparty_id.
         std::vector<std::pair<Stake, Stake>> changed;
         bool known = true;
         std::size_t old = 0;
-        for (std::size_t i = 0; i < names.size() && known && changed.size() <= changed_max; ++i) {
-            while (old < state.names.size() &&
-                   state.names[old]->counterparty_id < names[i]->counterparty_id)
-                changed.emplace_back(state.stakes[old++], Stake{});
-            bool const was_there = old < state.names.size() &&
-                                   state.names[old]->counterparty_id == names[i]->counterparty_id;
-            if (was_there && state.names[old] == names[i]) {
-                stakes[i] = state.stakes[old++];
+        for (std::size_t i = 0; i < book.size() && known && changed.size() <= changed_max; ++i) {
+            while (old < names.size() && names[old]->counterparty_id < book[i]->counterparty_id)
+                changed.emplace_back(stakes[old++], Stake{});
+            bool const was_there =
+                old < names.size() && names[old]->counterparty_id == book[i]->counterparty_id;
+            if (was_there && names[old] == book[i]) {
+                next[i] = stakes[old++];
                 continue;
             }
-            auto const stake = state.cells->stake(*names[i]);
-            known = stake.has_value() && state.cells->has_kind(*stake);
+            auto const stake = cells->stake(*book[i]);
+            known = stake.has_value() && cells->has_kind(*stake);
             if (!known) break;
-            stakes[i] = *stake;
-            Stake const before = was_there ? state.stakes[old++] : Stake{};
+            next[i] = *stake;
+            Stake const before = was_there ? stakes[old++] : Stake{};
             if (before != *stake) changed.emplace_back(before, *stake);
         }
-        for (; old < state.names.size(); ++old) changed.emplace_back(state.stakes[old], Stake{});
+        for (; old < names.size(); ++old) changed.emplace_back(stakes[old], Stake{});
         if (known && changed.size() <= changed_max) {
-            state.names.assign(names.begin(), names.end());
-            state.stakes = std::move(stakes);
-            state.updates += changed.size();
-            if (changed.empty() || state.transform->replace(changed)) return true;
-            state.transform.reset();
+            names.assign(book.begin(), book.end());
+            stakes = std::move(next);
+            updates += changed.size();
+            if (changed.empty() || transform->replace(changed)) return true;
+            transform.reset();
             return false;
         }
     }
-    state.names.assign(names.begin(), names.end());
-    state.settings = settings;
-    state.cells = std::make_shared<Cells const>(names, *settings);
-    state.stakes = std::move(stakes);
-    each_of(names.size(), threads_,
-            [&](std::size_t i) { state.stakes[i] = *state.cells->stake(*names[i]); });
-    state.transform.reset();
+    names.assign(book.begin(), book.end());
+    settings = model;
+    cells = std::make_shared<Cells const>(book, *model);
+    stakes = std::move(next);
+    each_of(book.size(), threads, [&](std::size_t i) { stakes[i] = *cells->stake(*book[i]); });
+    transform.reset();
     return false;
 }
 
-void Engine::rebuild() {
-    State& state = *state_;
-    state.transform.emplace(state.cells, *plan_, threads_);
-    state.transform->build(state.stakes);
-    state.updates = 0;
+void Engine::State::rebuild() {
+    transform.emplace(cells, *plan, threads);
+    transform->build(stakes);
+    updates = 0;
+}
+
+// Why the plan it was given cannot be used for this book at all.
+std::string Engine::State::misfit() const {
+    if (!is_usable(*plan, *cells)) return "it is of another model, or none";
+    if (plan->inversion == Inversion::lattice && !is_on_lattice(*plan, stakes))
+        return "losses are not multiples of its unit";
+    return {};
 }
 
 // Where more than the confidence is on no loss at all, the quantile is that of everybody staying,
 // and whoever loses loses beyond it.
-void Engine::fill_at_base(Figures& figures, double base) {
-    auto const& state = *state_;
+void Engine::State::fill_at_base(Figures& figures, double base) const {
     auto& totals = figures.totals;
-    double const beyond = 1.0 - state.settings->confidence;
+    double const beyond = 1.0 - settings->confidence;
     totals.loss_quantile = base;
     totals.credit_var = base - totals.expected_loss;
     totals.expected_shortfall = base + (totals.expected_loss - base) / beyond;
     for (std::size_t i = 0; i < figures.names.size(); ++i) {
-        if (!state.stakes[i].takes_part) continue;
+        if (!stakes[i].takes_part) continue;
         auto& own = figures.names[i];
-        own.var_contribution = state.stakes[i].base - own.expected_loss;
-        own.es_contribution =
-            state.stakes[i].base + (own.expected_loss - state.stakes[i].base) / beyond;
+        own.var_contribution = stakes[i].base - own.expected_loss;
+        own.es_contribution = stakes[i].base + (own.expected_loss - stakes[i].base) / beyond;
     }
 }
 
 // What the transform says of the totals and of each name's contributions.
-void Engine::fill(Figures& figures, double base, Fitness& fitness) {
-    State& state = *state_;
-    auto& [names, settings, cells, stakes, transform, atoms, updates] = state;
+void Engine::State::fill(Figures& figures, double base, Transform::Atoms const& atoms,
+                         Fitness& fitness) {
     auto& totals = figures.totals;
     double const confidence = settings->confidence;
     double const beyond = 1.0 - confidence;
@@ -320,15 +328,15 @@ void Engine::fill(Figures& figures, double base, Fitness& fitness) {
     double const density = mean_of(density_by_part);
     // Names alone in default are atoms of the loss, between which a quantile cannot lie.
     double const scale = scale_of(totals.expected_shortfall, totals.expected_loss);
-    double const jump = plan_->unit > 0.0 ? 0.0 : 0.5 * atoms.one / density;
+    double const jump = plan->unit > 0.0 ? 0.0 : 0.5 * atoms.one / density;
     // For large names, the window's effect; and where the loss is not smooth beside it, so that
     // atoms near the quantile are in the tail in part, what it would be with them out or in.
     bool const smooth = std::max(fitness.smoothing, jump / scale) <= 0.5 * smoothing_max;
-    double const width = smooth ? 0.0 : atom_widths * plan_->width;
+    double const width = smooth ? 0.0 : atom_widths * plan->width;
     std::array const beside{Transform::Target{contour.tail(x, wider_window), contour.tail_image()},
                             Transform::Target{contour.tail(x - width), contour.tail_image()},
                             Transform::Target{contour.tail(x + width), contour.tail_image()}};
-    double const window_effect = plan_->width > 0.0 ? curve.window_effect(q) : 0.0;
+    double const window_effect = plan->width > 0.0 ? curve.window_effect(q) : 0.0;
     double const tail_before = curve.tail(q - width);
     double const tail_after = curve.tail(q + width);
     transform->differentiate({above, at}, beside);
@@ -352,8 +360,8 @@ void Engine::fill(Figures& figures, double base, Fitness& fitness) {
                                               fourth_part_min * beyond * std::pow(rate, 4));
     std::vector<double> fourth(names.size());
 
-    each_of(names.size(), threads_, [&](std::size_t i) {
-        std::array<double, Transform::targets * 16> room;
+    each_of(names.size(), threads, [&](std::size_t i) {
+        std::array<double, Transform::targets * parts_max> room;
         std::span<double> const values{room.data(), Transform::targets * parts};
         transform->by_name(stakes[i], values);
         std::span<double const> const tails = values.first(parts);

@@ -14,8 +14,6 @@
 
 namespace model {
 
-struct Fitness;
-
 struct Figures {
     Totals totals;
     std::vector<NameFigures> names;  // as Book::names()
@@ -59,19 +57,12 @@ public:
     Engine(Engine&&) noexcept;
     Engine& operator=(Engine&&) noexcept;
 
+    // `names` by counterparty_id, as Book::names().
     Figures assess(std::span<std::shared_ptr<Name const> const> names,
                    std::shared_ptr<Settings const> const& settings);
 
 private:
     struct State;
-    bool update(std::span<std::shared_ptr<Name const> const> names,
-                std::shared_ptr<Settings const> const& settings);
-    void rebuild();
-    void fill_at_base(Figures& figures, double base);
-    void fill(Figures& figures, double base, Fitness& fitness);
-
-    unsigned threads_;
-    std::optional<Plan> plan_;
     std::unique_ptr<State> state_;
 };
 

@@ -100,8 +100,8 @@ LossCurve::LossCurve(Contour contour, Plan const& plan, double base, bool sample
     pooled_mean_ = std::accumulate(mean_.begin(), mean_.end(), 0.0) / parts;
 }
 
-double LossCurve::density(double x, double wider) const {
-    return real_dot(contour_.density(x - base_, wider), pooled_);
+double LossCurve::density(double x) const {
+    return real_dot(contour_.density(x - base_), pooled_);
 }
 
 double LossCurve::tail(double x, double wider) const {

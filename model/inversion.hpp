@@ -73,14 +73,14 @@ public:
               std::vector<double> mean);
 
     // x in base currency; between lowest() and highest().
-    [[nodiscard]] double density(double x, double wider = 1.0) const;
+    [[nodiscard]] double density(double x) const;
     [[nodiscard]] double tail(double x, double wider = 1.0) const;    // P(L > x)
     [[nodiscard]] double excess(double x, double wider = 1.0) const;  // E[(L - x)^+]
     // min{x: P(L <= x) >= confidence}
     [[nodiscard]] double quantile(double confidence, double wider = 1.0) const;
     [[nodiscard]] double expected_shortfall(double confidence) const;
 
-    // One standard error: of the scramblings alone, and with the window's effect.
+    // One standard error: the scramblings', the window's effect, and what images may add.
     [[nodiscard]] double tail_error(double x) const;
     [[nodiscard]] double quantile_error(double confidence) const;
     [[nodiscard]] double shortfall_error(double confidence) const;
@@ -97,7 +97,6 @@ public:
     [[nodiscard]] std::vector<double> tails(double x) const;
     [[nodiscard]] std::vector<double> excesses(double x) const;
 
-    [[nodiscard]] double base() const { return base_; }
     [[nodiscard]] double lowest() const { return lowest_; }
     [[nodiscard]] double highest() const { return highest_; }
     [[nodiscard]] Contour const& contour() const { return contour_; }

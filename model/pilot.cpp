@@ -23,6 +23,8 @@ constexpr std::size_t clusters_max = 6;
 constexpr double width_by_decay = 0.3;  // width x rate at which the tail falls
 constexpr double large_by_decay = 0.3;  // amount x that rate
 constexpr double negligible = 3e-6;     // of the tail
+// Points of a part times nodes: what no plan found here exceeds, even on many more points.
+constexpr std::uint64_t usable_work_max = 1U << 24U;
 constexpr double lattice_units_max = 4096.0;
 constexpr double kernel_reach = 8.0;
 constexpr double nodes_first_max = 512.0;
@@ -43,7 +45,7 @@ public:
             auto const parts = is_sampled(cells.loadings().cols())
                                    ? static_cast<double>(plan.scramblings)
                                : part.factors.size() == 0 ? 1.0
-                                                          : 16.0;
+                                                          : static_cast<double>(parts_max);
             for (Eigen::Index s = 0; s < kappa.cols(); ++s) {
                 factors_.emplace_back(part.factors.col(s));
                 weight_.push_back(part.weight[static_cast<std::size_t>(s)] / parts);
@@ -267,8 +269,22 @@ Plan find_plan(Cells const& cells, std::span<Stake const> stakes, std::uint64_t 
     plan.nodes = static_cast<std::uint32_t>(nodes());
 
     plan.large_from = rate > 0.0 ? large_by_decay / rate : 0.0;
-    plan.resolution = 0.01 * std::abs(quantile);
     return plan;
+}
+
+bool is_usable(Plan const& plan, Cells const& cells) {
+    auto const factors = cells.loadings().cols();
+    bool const lattice = plan.inversion == Inversion::lattice;
+    auto const positive = [](double x) { return x > 0.0 && std::isfinite(x); };
+    std::uint64_t points = 0;
+    for (auto const& component : plan.mixture) {
+        if (component.mean.size() != factors || !component.mean.allFinite()) return false;
+        points += component.points;
+    }
+    return plan.scramblings == scramblings && !plan.mixture.empty() && points >= parts_max &&
+           points % parts_max == 0 && points * plan.nodes <= usable_work_max && plan.nodes >= 2 &&
+           positive(plan.period) && positive(plan.damping) && std::isfinite(plan.lowest) &&
+           positive(lattice ? plan.unit : plan.width) && plan.large_from >= 0.0;
 }
 
 bool is_on_lattice(Plan const& plan, std::span<Stake const> stakes) {
@@ -300,7 +316,6 @@ std::optional<Plan> on_lattice(Plan plan, Settings const& settings, std::span<St
     plan.nodes = static_cast<std::uint32_t>(std::ceil(units / 2.0)) + 3;
     plan.period = 2.0 * (plan.nodes - 1) * plan.unit;
     plan.damping = 1.0 / plan.period;
-    plan.resolution = 0.0;
     return plan;
 }
 

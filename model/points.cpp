@@ -17,7 +17,6 @@ namespace {
 
 constexpr double reach = 10.0;        // of a quadrature rule along its first axis
 constexpr double reach_across = 8.0;  // and across it
-constexpr std::size_t quadrature_parts = 16;
 constexpr double step_across = 0.5;
 
 double density(double z) {
@@ -39,15 +38,15 @@ Eigen::MatrixXd axes_along(Eigen::VectorXd const& direction) {
 
 // A rule's points of every part, interleaved.
 std::vector<Part> in_parts(Eigen::MatrixXd const& factors, std::vector<double> const& weight) {
-    std::vector<Part> parts(quadrature_parts);
-    auto const count = static_cast<std::size_t>(factors.cols()) / quadrature_parts;
-    for (std::size_t p = 0; p < quadrature_parts; ++p) {
+    std::vector<Part> parts(parts_max);
+    auto const count = static_cast<std::size_t>(factors.cols()) / parts_max;
+    for (std::size_t p = 0; p < parts_max; ++p) {
         parts[p].factors.resize(factors.rows(), static_cast<Eigen::Index>(count));
         for (std::size_t n = 0; n < count; ++n) {
-            std::size_t const from = n * quadrature_parts + p;
+            std::size_t const from = n * parts_max + p;
             parts[p].factors.col(static_cast<Eigen::Index>(n)) =
                 factors.col(static_cast<Eigen::Index>(from));
-            parts[p].weight.push_back(weight[from] * quadrature_parts);
+            parts[p].weight.push_back(weight[from] * parts_max);
         }
     }
     return parts;

@@ -77,6 +77,7 @@ public:
     // principal components, the greatest first. They are the model's, not the book's, so that the
     // same plan means the same for every book.
     [[nodiscard]] Eigen::MatrixXd const& loadings() const { return loadings_; }
+    [[nodiscard]] double recovery_precision() const { return recovery_precision_; }
     [[nodiscard]] Settings const& settings() const { return *settings_; }
     [[nodiscard]] Migration const& migration() const { return *migration_; }
 

@@ -15,7 +15,7 @@ namespace model {
 
 enum class LossKind { default_only, revaluation };
 
-// The plain simulation: how many scenarios, and which stream of random numbers.
+// How many scenarios the judge draws, and the stream of random numbers, its own and the engine's.
 struct SimulationPlan {
     std::uint64_t scenarios = 200'000;  // >= 1,000
     std::uint64_t seed = 1;

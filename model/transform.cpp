@@ -3,7 +3,6 @@
 #include "model/parallel.hpp"
 
 #include <Eigen/Eigenvalues>
-#include <boost/math/special_functions/beta.hpp>
 
 #include <algorithm>
 #include <cmath>
@@ -234,16 +233,7 @@ LOADLINE_LANES bool divide_on(Lanes const* factor, std::size_t count, Lanes* phi
     return smallest > factor_min * factor_min;
 }
 
-LOADLINE_LANES void run_on(Run run, std::size_t count, Lanes* phi) {
-    for (std::size_t k = 0; k < count; ++k) {
-        phi[2 * k] = run.value.re;
-        phi[2 * k + 1] = run.value.im;
-        multiply(run.value, run.ratio);
-        multiply(run.ratio, run.second);
-        multiply(run.second, run.third);
-    }
-}
-
+// One at every node.
 LOADLINE_LANES void set_to_one(std::size_t count, Lanes* factor) {
     for (std::size_t k = 0; k < count; ++k) {
         factor[2 * k] = Lanes{} + 1.0;
@@ -396,31 +386,6 @@ std::pair<Eigen::VectorXd, Eigen::VectorXd> gauss_jacobi(double a, double b, Eig
             solver.eigenvectors().row(0).array().square().matrix().transpose()};
 }
 
-// The masses that carry a random loss, with its mean, on multiples of a unit: a loss between two of
-// them is shared out.
-//
-//     mass(n) = (G(n - 1) - 2 G(n) + G(n + 1)) / unit,   G(n) = E[(X - n unit)^+]
-std::vector<double> beta_on_lattice(double a, double b, double exposure, double unit) {
-    auto const excess = [&](double x) {
-        double const u = x / exposure;
-        if (u <= 0.0) return exposure * a / (a + b) - x;
-        if (u >= 1.0) return 0.0;
-        return exposure * (a / (a + b) * boost::math::ibetac(a + 1.0, b, u) -
-                           u * boost::math::ibetac(a, b, u));
-    };
-    auto const last = static_cast<std::size_t>(std::ceil(exposure / unit));
-    std::vector<double> mass;
-    double before = excess(-unit);
-    double here = excess(0.0);
-    for (std::size_t n = 0; n <= last; ++n) {
-        double const next = excess((static_cast<double>(n) + 1.0) * unit);
-        mass.push_back((before - 2.0 * here + next) / unit);
-        before = here;
-        here = next;
-    }
-    return mass;
-}
-
 }  // namespace
 
 CellSums::CellSums(Cells const& cells, Law const& law)
@@ -560,7 +525,6 @@ Transform::Large Transform::large(Stake const& stake) const {
     auto const grades = settings.grades.size();
     auto const probability = cells_->migration().matrix().row(stake.grade);
     bool const revaluation = settings.loss == LossKind::revaluation;
-    bool const lattice = plan_.inversion == Inversion::lattice;
     auto const& nodes = contour_.nodes();
     Large large{.stake = stake, .mixed = cells_->mixed(stake), .count = 1.0, .moves = {}};
 
@@ -576,20 +540,6 @@ Transform::Large Transform::large(Stake const& stake) const {
             to.slope[k] += amount * value;
         }
     };
-    // An amount on a lattice is shared between the two multiples it lies between.
-    auto const add_amount = [&](Move& to, double amount, double share) {
-        if (!lattice) {
-            add(to, amount, share);
-            return;
-        }
-        double const unit = plan_.unit;
-        double low = std::floor(amount / unit);
-        double part = amount / unit - low;
-        if (part > 1.0 - 1e-9) low += 1.0;
-        if (part < 1e-9 || part > 1.0 - 1e-9) part = 0.0;
-        add(to, low * unit, share * (1.0 - part));
-        if (part > 0.0) add(to, (low + 1.0) * unit, share * part);
-    };
 
     if (revaluation)
         for (std::size_t to = 0; to < grades; ++to) {
@@ -597,27 +547,17 @@ Transform::Large Transform::large(Stake const& stake) const {
             double const amount =
                 stake.exposure * settings.grade_values(stake.grade, state) - stake.base;
             if (to == stake.grade || probability[state] <= 0.0 || amount == 0.0) continue;
-            add_amount(move(to, amount), amount, 1.0);
+            add(move(to, amount), amount, 1.0);
         }
     if (probability[static_cast<Eigen::Index>(grades)] <= 0.0) return large;
     Move& on_default = move(revaluation ? grades : 0, stake.on_default[0]);
     if (stake.beta_exposure == 0.0) {
-        add_amount(on_default, stake.on_default[0], 1.0);
+        add(on_default, stake.on_default[0], 1.0);
         return large;
     }
-    double const m0 = settings.loss_given_default.value();
-    double const d = settings.loss_given_default_deviation;
-    double const precision = m0 * (1.0 - m0) / (d * d) - 1.0;
-    double const a = stake.beta_mean * precision;
-    double const b = precision - a;
+    double const a = stake.beta_mean * cells_->recovery_precision();
+    double const b = cells_->recovery_precision() - a;
     double const exposure = stake.beta_exposure;
-    if (lattice) {
-        auto const mass = beta_on_lattice(a, b, exposure, plan_.unit);
-        for (std::size_t n = 0; n < mass.size(); ++n)
-            if (mass[n] > 0.0)
-                add_amount(on_default, static_cast<double>(n) * plan_.unit - stake.base, mass[n]);
-        return large;
-    }
     double const reach = std::abs(nodes.back()) * exposure;
     auto const count = static_cast<Eigen::Index>(std::min(16.0 + reach / 3.0, jacobi_points_max));
     auto const [places, weights] = gauss_jacobi(a, b, count);
@@ -663,7 +603,8 @@ void Transform::reckon(std::size_t part) {
         double const* const own_kappa = kappa.col(static_cast<Eigen::Index>(g * lane_count)).data();
         for (std::size_t from = 0; from < nodes.size(); from += run_length) {
             std::size_t const count = std::min(run_length, nodes.size() - from);
-            run_on(run_from(nodes[from], contour_.step(), own_kappa), count, own + 2 * from);
+            set_to_one(count, own + 2 * from);
+            multiply_run(run_from(nodes[from], contour_.step(), own_kappa), count, own + 2 * from);
             for (std::size_t l = 0; l < large_.size(); ++l) {
                 auto const& moves = large_[l].moves;
                 if (moves.size() == 1 && large_[l].count == 1.0) {

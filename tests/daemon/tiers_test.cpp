@@ -42,11 +42,7 @@ protected:
     Tiers()
         : environment{"PGDATABASE=" + database.name(),
                       "LOADLINE_CONFIG=" + config.path().string()} {
-        std::filesystem::path const shipped = std::filesystem::path{LOADLINE_SOURCE} / "config";
-        for (auto const& file : std::filesystem::directory_iterator{shipped})
-            if (file.path().extension() == ".yaml" || file.path().extension() == ".csv")
-                std::filesystem::copy(file.path(), config.path() / file.path().filename());
-        change_model("scenarios: 200000", "scenarios: 40000");
+        copy_shipped_configuration(config);
         config.write("limits.yaml", limits);
         database.exec(book);
     }

@@ -22,10 +22,7 @@ protected:
     Verify()
         : environment{"PGDATABASE=" + database.name(),
                       "LOADLINE_CONFIG=" + config.path().string()} {
-        std::filesystem::path const shipped = std::filesystem::path{LOADLINE_SOURCE} / "config";
-        for (auto const& file : std::filesystem::directory_iterator{shipped})
-            if (file.path().extension() == ".yaml" || file.path().extension() == ".csv")
-                std::filesystem::copy(file.path(), config.path() / file.path().filename());
+        copy_shipped_configuration(config);
         database.exec(R"sql(
             INSERT INTO loadline.counterparty (counterparty_id, legal_name, sector, country)
             SELECT 'C' || n, 'Company ' || n, (ARRAY['MANUF', 'RETAIL', 'ENERGY'])[1 + n % 3], 'AT'

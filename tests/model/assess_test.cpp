@@ -38,15 +38,6 @@ void expect_sums(Figures const& figures) {
                 figures.totals.expected_shortfall, scale);
 }
 
-model::Settings revaluing(model::Settings settings) {
-    settings.loss = LossKind::revaluation;
-    settings.grade_values.resize(7, 7);
-    for (int from = 0; from < 7; ++from)
-        for (int to = 0; to < 7; ++to)
-            settings.grade_values(from, to) = 0.01 * (to - from) * (1.0 + 0.3 * to) - 0.005;
-    return settings;
-}
-
 model::Settings with_beta(model::Settings settings) {
     settings.loss_given_default_deviation = 0.25;
     return settings;
@@ -55,7 +46,7 @@ model::Settings with_beta(model::Settings settings) {
 TEST(Contributions, SumToCreditVarAndToShortfallForEveryKindOfLoss) {
     auto const names = tests::lender(300);
     for (auto const& settings : {tests::lender_settings(), with_beta(tests::lender_settings()),
-                                 revaluing(tests::lender_settings())}) {
+                                 tests::revalued_lender_settings()}) {
         auto const figures = assess(names, settings, 0);
         expect_sums(figures);
         EXPECT_TRUE(finite(figures));
@@ -92,7 +83,7 @@ TEST(Contributions, SumWhereTheQuantileIsNothing) {
 
 TEST(Assessment, GivesTheSameBitsForAnyNumberOfThreads) {
     tbb::global_control const limit{tbb::global_control::max_allowed_parallelism, 7};
-    auto const settings = revaluing(tests::lender_settings());
+    auto const settings = tests::revalued_lender_settings();
     auto const names = tests::lender(300);
     auto const one = assess(names, settings, 1);
     for (unsigned const threads : {2U, 7U}) {
@@ -127,6 +118,46 @@ TEST(Plan, IsReplacedForAReasonWhereItNoLongerServes) {
     auto const moved = model::Engine{0, small.plan}.assess(names, settings);
     EXPECT_NE(moved.plan_replaced, "");
     EXPECT_EQ(moved.totals.loss_quantile, assess(names, *settings, 0).totals.loss_quantile);
+}
+
+// Its points would be of other factors, its parts more than there is room for, its losses off the
+// lattice: none of that may be worked by.
+TEST(Plan, ThatIsOfAnotherModelIsNotWorkedBy) {
+    auto const settings = std::make_shared<model::Settings const>(tests::lender_settings());
+    auto const names = tests::lender(60);
+    auto const fresh = model::Engine{0}.assess(names, settings);
+    auto const spoilt = [&](auto spoil) {
+        auto plan = fresh.plan;
+        spoil(plan);
+        auto const figures = model::Engine{0, plan}.assess(names, settings);
+        EXPECT_EQ(figures.plan, fresh.plan);
+        return figures.plan_replaced;
+    };
+    EXPECT_NE(spoilt([](model::Plan& plan) { plan.scramblings = 40; }), "");
+    EXPECT_NE(spoilt([](model::Plan& plan) { plan.mixture.front().mean.conservativeResize(3); }),
+              "");
+    EXPECT_NE(spoilt([](model::Plan& plan) { plan.nodes = 4'000'000'000; }), "");
+    EXPECT_NE(spoilt([](model::Plan& plan) { plan.period = std::nan(""); }), "");
+    EXPECT_NE(spoilt([](model::Plan& plan) {
+                  plan.inversion = model::Inversion::lattice;
+                  plan.unit = 1'000.0;
+              }),
+              "");
+}
+
+// Five names are atoms that no plan makes smooth; theirs serves all the same, until it gets worse.
+TEST(Plan, OfALumpyBookServesTheNextOne) {
+    auto const settings = std::make_shared<model::Settings const>(tests::lender_settings());
+    auto names = tests::lender(5);
+    model::Engine engine{0};
+    auto const plan = engine.assess(names, settings).plan;
+    EXPECT_GT(plan.strain, 0.5);
+    auto name = *names[2];
+    name.loss_at_default *= 1.01;
+    names[2] = std::make_shared<model::Name const>(name);
+    auto const next = engine.assess(names, settings);
+    EXPECT_EQ(next.plan_replaced, "");
+    EXPECT_EQ(next.plan, plan);
 }
 
 // A default probability of 1% at 99.9%: the loss is all there is to lose, and that for certain.

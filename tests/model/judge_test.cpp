@@ -107,15 +107,6 @@ tests::Names heavy_book() {
     return names;
 }
 
-model::Settings revalued_lender() {
-    auto settings = tests::lender_settings();
-    settings.loss = LossKind::revaluation;
-    settings.grade_values.resize(7, 7);
-    for (int from = 0; from < 7; ++from)
-        for (int to = 0; to < 7; ++to) settings.grade_values(from, to) = 0.01 * (to - from) - 0.002;
-    return settings;
-}
-
 // Exposures 1, 4, 9, 16, 25, twenty names each, all of which is lost.
 tests::Names hundred_names() {
     tests::Names names;
@@ -295,7 +286,7 @@ TEST(ShiftedJudge, AgreesWithThePlainOneOnALumpyBook) {
 }
 
 TEST(ShiftedJudge, AgreesWithThePlainOneWhereGradesAreRevalued) {
-    expect_modes_to_agree(tests::lender(300), revalued_lender(), 50'000);
+    expect_modes_to_agree(tests::lender(300), tests::revalued_lender_settings(), 50'000);
 }
 
 TEST(ShiftedJudge, AgreesWithThePlainOneWhereRecoveriesAreBeta) {

@@ -68,16 +68,6 @@ std::vector<double> naive_losses(tests::Names const& names, model::Settings cons
     return losses;
 }
 
-// A grade better or worse is worth 1% of the exposure for each step; staying costs a little.
-model::Settings revalued_lender() {
-    auto settings = tests::lender_settings();
-    settings.loss = LossKind::revaluation;
-    settings.grade_values.resize(7, 7);
-    for (int from = 0; from < 7; ++from)
-        for (int to = 0; to < 7; ++to) settings.grade_values(from, to) = 0.01 * (to - from) - 0.002;
-    return settings;
-}
-
 TEST(Philox, GivesItsPublishedFirstWords) {
     auto const words = r123::Philox4x32{}({{0, 0, 0, 0}}, {{0, 0}});
     EXPECT_EQ(words[0], 0x6627e8d5U);
@@ -88,7 +78,7 @@ TEST(Philox, GivesItsPublishedFirstWords) {
 
 TEST(Simulation, GivesTheSameBitsForAnyNumberOfThreads) {
     tbb::global_control const seven{tbb::global_control::max_allowed_parallelism, 7};
-    for (auto settings : {tests::lender_settings(), revalued_lender()}) {
+    for (auto settings : {tests::lender_settings(), tests::revalued_lender_settings()}) {
         settings.loss_given_default_deviation = 0.2;
         auto const names = tests::lender(400);
         Migration const migration{settings};
@@ -120,7 +110,7 @@ TEST(Simulation, OtherSeedsGiveOtherScenarios) {
 }
 
 TEST(Simulation, MovesOfAScenarioAddUpToItsLossAndNameEachNameOnce) {
-    auto settings = revalued_lender();
+    auto settings = tests::revalued_lender_settings();
     settings.loss_given_default_deviation = 0.2;
     auto const names = tests::lender(400);
     Migration const migration{settings};
@@ -144,7 +134,7 @@ TEST(Simulation, MovesOfAScenarioAddUpToItsLossAndNameEachNameOnce) {
 }
 
 TEST(Simulation, DrawsTheLossesThatNamesAskedOneByOneDo) {
-    for (auto const& settings : {tests::lender_settings(), revalued_lender()}) {
+    for (auto const& settings : {tests::lender_settings(), tests::revalued_lender_settings()}) {
         auto names = tests::lender(150);
         auto own = *names[0];
         own.asset_correlation = 0.7;
@@ -175,7 +165,7 @@ TEST(Simulation, DrawsTheLossesThatNamesAskedOneByOneDo) {
 }
 
 TEST(Simulation, TakesNamesToEveryGradeAsOftenAsTheMatrixSays) {
-    auto settings = revalued_lender();
+    auto settings = tests::revalued_lender_settings();
     settings.grade_values.diagonal().setZero();
     for (std::uint8_t from = 0; from < 7; ++from) {
         tests::Names const names{tests::name(from, 100.0, 50.0)};
@@ -287,7 +277,7 @@ TEST(FactorLaw, GivesEveryComponentItsShareOfSixteenScenarios) {
 
 // The weights' mean is 1, and weighted losses have the mean and the square they have unweighted.
 TEST(Simulation, WeighsShiftedScenariosSoThatNothingIsBiased) {
-    for (auto const& settings : {tests::lender_settings(), revalued_lender()}) {
+    for (auto const& settings : {tests::lender_settings(), tests::revalued_lender_settings()}) {
         auto const names = tests::lender(150);
         Migration const migration{settings};
         Simulation const simulation{names, settings, migration, 3};
@@ -335,7 +325,7 @@ TEST(Simulation, DrawsTheSameScenariosAgain) {
 // The mean of what is expected given the indices is the mean of what is drawn, within any bounds.
 TEST(Simulation, ExpectsOfAMoveWhatIsDrawnOfIt) {
     for (double const d : {0.0, 0.3}) {
-        for (auto settings : {tests::lender_settings(), revalued_lender()}) {
+        for (auto settings : {tests::lender_settings(), tests::revalued_lender_settings()}) {
             settings.loss_given_default_deviation = d;
             tests::Names const names{tests::name(5, 100.0, 45.0)};
             Migration const migration{settings};

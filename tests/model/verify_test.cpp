@@ -124,12 +124,7 @@ TEST(Verdict, AgreesOnBooksThatAreAlmostNothing) {
 }
 
 TEST(Verdict, AgreesWhereGradesHaveValues) {
-    auto settings = tests::lender_settings();
-    settings.loss = model::LossKind::revaluation;
-    settings.grade_values.resize(7, 7);
-    for (int from = 0; from < 7; ++from)
-        for (int to = 0; to < 7; ++to) settings.grade_values(from, to) = 0.01 * (to - from);
-    Both const both{settings, tests::lender(150)};
+    Both const both{tests::revalued_lender_settings(), tests::lender(150)};
     EXPECT_TRUE(both.verdict().agrees()) << told(both.verdict());
 }
 

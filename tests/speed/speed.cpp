@@ -383,12 +383,8 @@ int main(int argc, char** argv) {
         grown(fmt::format("{}", size), tests::lender(size), settings);
     auto million = tests::lender(1'000'000);
     grown("1000000", million, settings);
-    auto revalued = std::make_shared<model::Settings>(*settings);
-    revalued->loss = model::LossKind::revaluation;
-    revalued->grade_values.resize(7, 7);
-    for (int a = 0; a < 7; ++a)
-        for (int b = 0; b < 7; ++b) revalued->grade_values(a, b) = 0.01 * (b - a);
-    grown("1000000, revaluation", million, revalued);
+    grown("1000000, revaluation", million,
+          std::make_shared<model::Settings const>(tests::revalued_lender_settings()));
     million = changed(std::move(million), [](std::size_t i, model::Name& name) {
         name.asset_correlation = 0.05 + 0.3 * std::fmod(0.618034 * static_cast<double>(i), 1.0);
         return true;

@@ -69,6 +69,15 @@ model::Settings lender_settings() {
     return settings;
 }
 
+model::Settings revalued_lender_settings() {
+    model::Settings settings = lender_settings();
+    settings.loss = model::LossKind::revaluation;
+    settings.grade_values.resize(7, 7);
+    for (int from = 0; from < 7; ++from)
+        for (int to = 0; to < 7; ++to) settings.grade_values(from, to) = 0.01 * (to - from) - 0.002;
+    return settings;
+}
+
 Names lender(std::size_t counterparties) {
     // Grades in the middle are the commonest; a name's facts are independent of one another.
     constexpr std::array grades{0, 1, 1, 2, 2, 2, 3, 3, 3, 3, 4, 4, 4, 5, 5, 6};
@@ -76,7 +85,7 @@ Names lender(std::size_t counterparties) {
     Names names;
     for (std::size_t i = 0; i < counterparties; ++i) {
         model::Name name;
-        name.counterparty_id = fmt::format("C{:05}", i);
+        name.counterparty_id = fmt::format("C{:07}", i);
         name.grade = {static_cast<std::uint8_t>(grades[bits() % grades.size()])};
         name.sector = sectors[bits() % sectors.size()];
         name.country = countries[bits() % countries.size()];

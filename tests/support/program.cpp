@@ -67,6 +67,13 @@ std::string Folder::read(std::string const& file) const {
     return text_of(path_ / file);
 }
 
+void copy_shipped_configuration(Folder const& to) {
+    std::filesystem::path const shipped = std::filesystem::path{LOADLINE_SOURCE} / "config";
+    for (auto const& file : std::filesystem::directory_iterator{shipped})
+        if (file.path().extension() == ".yaml" || file.path().extension() == ".csv")
+            std::filesystem::copy(file.path(), to.path() / file.path().filename());
+}
+
 Ran run_loadline(std::vector<std::string> const& arguments,
                  std::vector<std::string> const& environment) {
     Folder const folder;

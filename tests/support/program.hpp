@@ -27,6 +27,9 @@ private:
     std::filesystem::path path_;
 };
 
+// The configuration the project ships, as a starting point.
+void copy_shipped_configuration(Folder const& to);
+
 struct Ran {
     int code = -1;
     std::string out;
